@@ -1,0 +1,57 @@
+# Copyright 2026 The prioritized_tracking contributors
+# SPDX-License-Identifier: Apache-2.0
+"""
+Cartesian position: chosen axes of the frame's origin.
+
+"""
+
+from __future__ import annotations
+
+from prioritized_tracking.charts.base import UnitRateChart
+from prioritized_tracking.core.rotation import Array
+from prioritized_tracking.schema import Parameter
+
+AXES = ("x", "y", "z", "xy", "xz", "yz", "xyz")
+
+
+def position(p: Array, axes: tuple[int, ...], x: Array, rows: Array) -> float:
+    """
+    Selected coordinates of p; never fails.
+
+    """
+    for i, axis in enumerate(axes):
+        x[i] = p[axis]
+        rows[i, axis] = 1.0
+    return 1.0
+
+
+class Position(UnitRateChart):
+    """
+    Position of the frame's origin along chosen base axes, m.
+
+    """
+
+    parameters = (
+        Parameter(
+            key="axes",
+            type="string",
+            default="xyz",
+            choices=AXES,
+            help="Base axes along which the position counts.",
+        ),
+    )
+    unit = "m"
+
+    def __init__(self, *, axes: str = "xyz") -> None:
+        if axes not in AXES:
+            raise ValueError(f"axes: expected one of {', '.join(AXES)}, got {axes!r}")
+        self.coordinates = tuple(axes)
+        self.angular = (False,) * len(axes)
+        self._axes = tuple("xyz".index(a) for a in axes)
+
+    def evaluate(self, R: Array, p: Array, x: Array, rows: Array, rate: Array) -> float:
+        """
+        See :meth:`Chart.evaluate`.
+
+        """
+        return position(p, self._axes, x, rows)

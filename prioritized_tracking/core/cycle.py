@@ -1,0 +1,387 @@
+# Copyright 2026 The prioritized_tracking contributors
+# SPDX-License-Identifier: Apache-2.0
+"""
+One control cycle: (time, joint positions, joint velocities) → torque and telemetry.
+
+The same cycle serves the node, rehearsals and audits. It knows no clock, no file and no ROS; time is
+an argument.
+
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from prioritized_tracking.core.arm import Arm, ArmData, dynamics, frame_motion, inertia
+from prioritized_tracking.core.channels import Channel, References, Samples
+from prioritized_tracking.core.laws import LAWS, TWIN_STEP, Law, Torque
+from prioritized_tracking.core.references import JointHold, PoseHold
+from prioritized_tracking.core.rotation import Array, rotation_log
+from prioritized_tracking.core.stack import Evaluation, Stack
+from prioritized_tracking.core.start import StartLimits, joint_problems, state_problems, tool_problems
+from prioritized_tracking.errors import InputError, Problem
+
+
+@dataclass(slots=True, eq=False)
+class TaskReport:
+    """
+    One task in one cycle.
+
+    Attributes
+    ----------
+    error : (m,) x̃, m or rad.
+    share : directions owned, 0 … m; NaN for laws without shares.
+    apparent_inertia : largest 1/λ over the owned directions of the heaviest branch, kg or kg·m²;
+        inf if it owns none.
+    validity : c, 0 … 1.
+
+    """
+
+    error: Array
+    share: float
+    apparent_inertia: float
+    validity: float
+
+
+@dataclass(slots=True, eq=False)
+class Command:
+    """
+    Outcome of one cycle.
+
+    Attributes
+    ----------
+    torque : (n,) to be sent, N·m (without gravity if the driver adds it).
+    joint_velocity_reference : (n,) q̇_r, rad/s.
+    tasks : a `TaskReport` for each task, in order of priority.
+    share_sum : sum of the shares; n for a complete stack.
+    branches : number of exact hierarchies blended.
+    pruned : more of them were met than can be followed.
+    limited : the torque limit cut the feedback, or more.
+    events : what the guard did.
+
+    """
+
+    torque: Array
+    joint_velocity_reference: Array
+    tasks: dict[str, TaskReport]
+    share_sum: float
+    branches: int = 1
+    pruned: bool = False
+    limited: bool = False
+    events: tuple[str, ...] = field(default=())
+
+
+def limit_torque(feed_forward: Array, feedback: Array, limit: Array) -> tuple[Array, bool]:
+    """
+    Scale the feedback until the torque fits; only if the feed-forward alone does not, clip it.
+
+    Parameters
+    ----------
+    feed_forward, feedback, limit : (n,) N·m; limits positive.
+
+    Returns
+    -------
+    torque : (n,) N·m, within the limits.
+    limited : whether anything was cut.
+
+    """
+    total = feed_forward + feedback
+    if np.all(np.abs(total) <= limit):
+        return total, False
+    base = np.clip(feed_forward, -limit, limit)
+    room = np.where(feedback > 0.0, limit - base, limit + base)
+    needed = np.abs(feedback)
+    scale = np.min(np.divide(room, needed, out=np.ones_like(room), where=needed > room))
+    return np.clip(base + scale * feedback, -limit, limit), True
+
+
+class Controller:
+    """
+    A stack on an arm, with its references and a law.
+
+    Parameters
+    ----------
+    arm, stack : the mechanism and the priority list.
+    channels : references by name.
+    law : name of the law, see `core.laws.LAWS`.
+    rate : control rate, Hz.
+    gravity_by_driver : the driver adds gravity itself; it still counts in the limits.
+    start_limits : see `StartLimits`.
+
+    Attributes
+    ----------
+    joints : names in command order.
+    tools : for each controlled frame (frame, base, channel) numbers and name.
+    stack_file : the file it was built from; None: built by hand.
+    notes : what the user should be told about it.
+
+    """
+
+    def __init__(
+        self,
+        arm: Arm,
+        stack: Stack,
+        channels: Mapping[str, Channel],
+        *,
+        law: str = "prioritized",
+        rate: float = 1000.0,
+        gravity_by_driver: bool = False,
+        start_limits: StartLimits | None = None,
+    ) -> None:
+        self.arm, self.stack, self.channels, self.rate = arm, stack, dict(channels), rate
+        self.joints = arm.joints
+        self.gravity_by_driver = gravity_by_driver
+        self.start_limits = start_limits or StartLimits()
+        self.stack_file: Any = None
+        self.notes: tuple[str, ...] = ()
+        self.law: Law = LAWS[law](arm, stack)
+        self.tools = {
+            task.frame: (arm.frame_id(task.frame), arm.frame_id(task.base), task.reference)
+            for task in reversed(stack.tasks)
+            if task.chart.kind == "pose"
+        }
+        self.names = tuple(t.name for t in stack.tasks) + ((stack.posture.name,) if stack.posture else ())
+        self._here, self._there = Evaluation(arm, stack), Evaluation(arm, stack)
+        self._data: ArmData = arm.data()
+        self._references = References(channels)
+        self._samples: Samples = {}
+
+    @property
+    def duration(self) -> float:
+        """
+        Time the longest reference takes at its pace, s; inf for endless ones, 0 for holds.
+
+        """
+        return self._references.duration
+
+    # ------------------------------------------------------------------ life
+
+    def activate(self, t: float, q: Array, v: Array) -> None:
+        """
+        Take the arm's state as the start: hold references start here, paths wait at their beginning.
+
+        Parameters
+        ----------
+        t : controller time, s.
+        q, v : (n,) rad and rad/s.
+
+        Raises
+        ------
+        InputError
+            If the arm moves, is outside its limits, or a reference starts away from it. Bring the
+            arm to the start of the path first.
+
+        """
+        q, v = self._state(q, v)
+        references = self._references
+        references.activate(t, self._holder(q))
+        self._samples = references.at(t)
+        starts = {name: self._samples[name].q for name, c in self.channels.items() if c.kind == "joints"}
+        problems = state_problems(self.arm, q, v)
+        problems += tool_problems(self.pose_errors(q), self.start_limits)
+        problems += joint_problems(self.arm, q, starts, self.start_limits)
+        if problems:
+            references.active = False
+            raise InputError(problems)
+        if any(channel.at_activation for channel in self.channels.values()):
+            references.start(t, only_at_activation=True)
+
+    def start(self, t: float) -> None:
+        """
+        Begin, or go on, along the paths.
+
+        """
+        self._require_active()
+        self._references.start(t)
+
+    def hold(self, t: float) -> None:
+        """
+        Brake along the paths and hold there.
+
+        """
+        self._require_active()
+        self._references.hold(t)
+
+    def reset(self, t: float) -> None:
+        """
+        Go back to holding; never resumes a motion by itself.
+
+        """
+        self.hold(t)
+
+    # ----------------------------------------------------------------- cycle
+
+    def step(self, t: float, q: Array, v: Array) -> Command:
+        """
+        Run one cycle.
+
+        Parameters
+        ----------
+        t : controller time, s; must not go back.
+        q, v : (n,) measured joint positions (rad) and velocities (rad/s).
+
+        Returns
+        -------
+        Command
+            With the torque within its limits.
+
+        Raises
+        ------
+        InputError
+            Before activation, or for a state that is not n finite numbers.
+
+        """
+        self._require_active()
+        q, v = self._state(q, v)
+        references = self._references
+        self._samples = references.at(t)
+        there = references.at(t + TWIN_STEP)
+        outcome = self._law(q, v, self._samples, there, references.push_scale(t))
+        torque, limited = limit_torque(outcome.feed_forward, outcome.feedback, self.arm.torque_limit)
+        return self._command(torque, outcome, limited)
+
+    def evaluate(self, t: float, q: Array, v: Array) -> Command:
+        """
+        The bare law at any state and any path time; changes nothing.
+
+        Parameters
+        ----------
+        t : path time of every reference, s.
+        q, v : (n,) rad and rad/s.
+
+        Returns
+        -------
+        Command
+            With the torque before any limit. References that hold do so at ``q`` unless the
+            controller has been activated.
+
+        """
+        q, v = self._state(q, v)
+        holder = self._holder(q)
+        here, there = (self._references.at_path_time(s, holder) for s in (t, t + TWIN_STEP))
+        outcome = self._law(q, v, here, there, 1.0)
+        return self._command(outcome.feed_forward + outcome.feedback, outcome, False)
+
+    def _law(self, q: Array, v: Array, samples: Samples, samples_there: Samples, push_scale: float) -> Torque:
+        """
+        Evaluate the stack at the state and, for tracking laws, at its twin; then the law.
+
+        """
+        here, there = self._here, self._there
+        dynamics(self.arm, here.data, q, v)
+        here.update(q, samples)
+        if self.law.tracks:
+            twin = q + TWIN_STEP * v
+            inertia(self.arm, there.data, twin)
+            there.update(twin, samples_there, here)
+        return self.law.torque(here, samples, there, samples_there, v, push_scale)
+
+    def _command(self, torque: Array, outcome: Torque, limited: bool) -> Command:
+        """
+        Put torque and telemetry together.
+
+        """
+        here, law = self._here, self.law
+        share, apparent = law.report.tolist()
+        validity = here.claims.validity.tolist()
+        tasks = {
+            task.name: TaskReport(work.error.copy(), share[i], apparent[i], validity[i])
+            for i, (task, work) in enumerate(zip(self.stack.tasks, here.charts, strict=True))
+        }
+        if self.stack.posture:
+            tasks[self.stack.posture.name] = TaskReport(
+                here.posture_error.copy(), share[-1], apparent[-1], 1.0
+            )
+        if self.gravity_by_driver:
+            torque = torque - here.data.g
+        return Command(
+            torque, outcome.velocity_reference, tasks, sum(share), law.branches, law.pruned, limited
+        )
+
+    # ------------------------------------------------------------ references
+
+    def _holder(self, q: Array) -> Callable[[str, Channel], PoseHold | JointHold]:
+        """
+        What makes a hold at joint positions q for a channel.
+
+        """
+
+        def hold_here(name: str, channel: Channel) -> PoseHold | JointHold:
+            if channel.kind == "joints":
+                return JointHold(q)
+            for frame, base, reference in self.tools.values():
+                if reference == name:
+                    return PoseHold(*self.pose(frame, base, q))
+            return PoseHold(np.eye(3), np.zeros(3))  # drives nothing
+
+        return hold_here
+
+    def pose(self, frame: int, base: int, q: Array) -> tuple[Array, Array]:
+        """
+        Pose of a frame in a base at joint positions q: (3, 3) and (3,), m.
+
+        """
+        R, p, J = np.eye(3), np.zeros(3), np.zeros((6, self.arm.n))
+        inertia(self.arm, self._data, q)
+        frame_motion(self.arm, self._data, frame, base, R, p, J)
+        return R, p
+
+    def pose_errors(self, q: Array) -> dict[str, tuple[float, float]]:
+        """
+        Distance (m) and angle (rad) of each controlled frame at q from the last cycle's reference.
+
+        """
+        errors = {}
+        for name, (frame, base, reference) in self.tools.items():
+            target = self._samples[reference]
+            R, p = self.pose(frame, base, q)
+            angle = rotation_log(R @ target.R.T, np.zeros(3))
+            errors[name] = (float(np.linalg.norm(p - target.p)), float(angle))
+        return errors
+
+    def start_configuration(self) -> Array:
+        """
+        Joint positions (n,), rad, where the joint references start; mid-range where there are none.
+
+        """
+        for channel in self.channels.values():
+            if channel.kind == "joints" and channel.path is not None:
+                return np.array(channel.path.sample(0.0, 0.0, 0.0).q)
+        low, high = (np.where(np.isfinite(limit), limit, 0.0) for limit in (self.arm.lower, self.arm.upper))
+        return 0.5 * (low + high)
+
+    # ---------------------------------------------------------------- checks
+
+    def _state(self, q: Array, v: Array) -> tuple[Array, Array]:
+        """
+        The measured state as finite arrays of the right length.
+
+        """
+        arrays = []
+        for name, unit, value in (("positions", "rad", q), ("velocities", "rad/s", v)):
+            array = np.ascontiguousarray(value, dtype=np.float64)
+            if array.shape != (self.arm.n,) or not np.isfinite(array).all():
+                raise InputError(
+                    Problem(
+                        what=f"joint {name} cannot be used",
+                        expected=f"{self.arm.n} finite numbers ({unit}) for {', '.join(self.joints)}",
+                        got=f"shape {array.shape}, {np.array2string(array, threshold=14)}",
+                        remedy="Check the joint state's names and lengths.",
+                    )
+                )
+            arrays.append(array)
+        return arrays[0], arrays[1]
+
+    def _require_active(self) -> None:
+        """
+        Refuse to work before activation.
+
+        """
+        if not self._references.active:
+            raise InputError(
+                Problem(what="the controller is not active", remedy="Call activate(t, q, v) first.")
+            )

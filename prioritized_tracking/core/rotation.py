@@ -1,0 +1,89 @@
+# Copyright 2026 The prioritized_tracking contributors
+# SPDX-License-Identifier: Apache-2.0
+"""
+Rotation matrices and rotation vectors.
+
+"""
+
+from __future__ import annotations
+
+import math
+from typing import TypeAlias
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array: TypeAlias = NDArray[np.float64]
+
+#: Below this angle (rad) sin(θ)/θ is 1 to machine precision: θ²/6 < 2e-16.
+_SMALL = 3e-8
+#: From this angle (rad) on the axis comes from the symmetric part of R: sin(θ) loses digits there.
+_NEAR_PI = 3.0
+
+
+def rotation_log(R: Array, out: Array) -> float:
+    """
+    Rotation vector of a rotation matrix, shortest way round.
+
+    The axis comes from the skew part of R, near π from the symmetric part
+    R + Rᵀ = 2 cos θ I + 2 (1 − cos θ) a aᵀ with the sign of the skew part.
+
+    Parameters
+    ----------
+    R : (3, 3) rotation matrix.
+    out : (3,) filled with θ a (rad).
+
+    Returns
+    -------
+    float
+        The angle θ in [0, π], rad.
+
+    """
+    x = R[2, 1] - R[1, 2]
+    y = R[0, 2] - R[2, 0]
+    z = R[1, 0] - R[0, 1]
+    twice_sine = math.sqrt(x * x + y * y + z * z)
+    angle = math.atan2(twice_sine, R[0, 0] + R[1, 1] + R[2, 2] - 1.0)
+    if angle < _NEAR_PI:
+        factor = 0.5 if angle < _SMALL else angle / twice_sine
+        out[0] = factor * x
+        out[1] = factor * y
+        out[2] = factor * z
+        return angle
+    cosine = math.cos(angle)
+    k = 0
+    for i in range(1, 3):
+        if R[i, i] > R[k, k]:
+            k = i
+    length = 0.0
+    for i in range(3):
+        out[i] = 0.5 * (R[i, k] + R[k, i]) - (cosine if i == k else 0.0)
+        length += out[i] * out[i]
+    sign = 1.0 if out[0] * x + out[1] * y + out[2] * z >= 0.0 else -1.0
+    factor = sign * angle / math.sqrt(length)
+    for i in range(3):
+        out[i] *= factor
+    return angle
+
+
+def rotation_exp(r: Array) -> Array:
+    """
+    Rotation matrix of a rotation vector (rad), Rodrigues' formula.
+
+    Parameters
+    ----------
+    r : (3,) rotation vector.
+
+    Returns
+    -------
+    (3, 3) array
+        I + sin θ/θ [r]× + (1 − cos θ)/θ² [r]×².
+
+    """
+    angle = math.sqrt(r[0] * r[0] + r[1] * r[1] + r[2] * r[2])
+    half = 0.5 * angle
+    s = 1.0 if angle < _SMALL else math.sin(angle) / angle
+    v = 0.5 if angle < _SMALL else 0.5 * (math.sin(half) / half) ** 2
+    K = np.array([[0.0, -r[2], r[1]], [r[2], 0.0, -r[0]], [-r[1], r[0], 0.0]])
+    R: Array = np.eye(3) + s * K + v * (K @ K)
+    return R

@@ -1,0 +1,222 @@
+# Copyright 2026 The prioritized_tracking contributors
+# SPDX-License-Identifier: Apache-2.0
+"""
+The control cycle from outside: activation, start, hold, limits, bad states.
+
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from hypothesis.extra.numpy import arrays
+
+from prioritized_tracking.charts import Position
+from prioritized_tracking.core import arm as arms
+from prioritized_tracking.core.cycle import limit_torque
+from prioritized_tracking.errors import InputError
+from tests.arms import planar_arm
+from tests.stacks import REST, controller, planar, seven_axes, task
+
+BENT = np.array([0.3, 0.8, 0.4])
+STILL = np.zeros(3)
+
+
+def holding(**settings):
+    """A planar arm that holds tip and posture where it is activated."""
+    arm = planar_arm((0.5, 0.4, 0.3), **settings.pop("arm", {}))
+    return controller(arm, [task("pen", Position(axes="xy"), "tip", "base")], **settings)
+
+
+def test_a_step_is_the_bare_law_within_the_limits():
+    """step and evaluate agree where no limit acts, at the same path time."""
+    control = planar(arm={"effort": 1e4})
+    q = control.start_configuration()
+    control.start_limits = type(control.start_limits)(position=10.0, angle=10.0, joint=10.0)
+    control.activate(5.0, q, STILL)
+    control.start(5.0)
+    v = np.array([0.1, -0.2, 0.3])
+    stepped, bare = control.step(6.25, BENT, v), control.evaluate(1.25, BENT, v)
+    np.testing.assert_allclose(stepped.torque, bare.torque, atol=1e-4)
+
+
+def test_evaluate_changes_nothing():
+    """A step gives the same numbers whether or not the law was evaluated elsewhere in between."""
+    results = []
+    for disturb in (False, True):
+        control = holding()
+        control.activate(0.0, BENT, STILL)
+        control.step(0.001, BENT + 1e-3, STILL)
+        if disturb:
+            control.evaluate(3.0, BENT + 0.5, STILL + 1.0)
+        results.append(control.step(0.002, BENT + 1e-3, STILL + 0.01))
+    np.testing.assert_array_equal(results[0].torque, results[1].torque)
+
+
+def test_the_same_steps_give_the_same_numbers():
+    """No state of a controller leaks into another one."""
+    torques = []
+    for _ in range(2):
+        control = holding()
+        control.activate(0.0, BENT, STILL)
+        torques.append([control.step(1e-3 * k, BENT + 1e-4 * k, STILL).torque for k in range(5)])
+    np.testing.assert_array_equal(*torques)
+
+
+def test_paths_wait_for_start_and_hold_brakes_along_them():
+    """Before start the reference stays, after hold it comes to rest within the ramp and stays."""
+    control = planar()
+    control.start_limits = type(control.start_limits)(position=10.0, angle=10.0, joint=10.0)
+    q = control.start_configuration()
+    control.activate(0.0, q, STILL)
+
+    def reference(t):
+        control.step(t, q, STILL)
+        return control._samples["tool"].p.copy()
+
+    np.testing.assert_array_equal(reference(0.7), reference(0.0))
+    control.start(1.0)
+    assert np.linalg.norm(reference(2.5) - reference(1.0)) > 0.05
+    control.hold(2.5)
+    assert np.linalg.norm(reference(2.6) - reference(2.5)) > 1e-3
+    np.testing.assert_allclose(reference(9.0), reference(3.0), atol=1e-12)
+    control.start(10.0)
+    assert np.linalg.norm(reference(11.0) - reference(10.0)) > 1e-3
+
+
+def test_torque_has_no_step_when_a_path_is_held_and_resumed():
+    """No larger change in a cycle than in plain tracking; a jump of the rate would be tens of N·m."""
+    control = planar()
+    control.start_limits = type(control.start_limits)(position=10.0, angle=10.0, joint=10.0)
+    q = control.start_configuration()
+    control.activate(0.0, q, STILL)
+    control.start(0.0)
+    torques = []
+    for k in range(4000):
+        t = 1e-3 * k
+        if k == 1500:
+            control.hold(t)
+        if k == 2800:
+            control.start(t)
+        torques.append(control.step(t, q, STILL).torque)
+    steps = np.abs(np.diff(torques, axis=0)).max(axis=1)
+    around = np.r_[1495:1510, 2795:2810]
+    assert steps[around].max() < 1.2 * steps[600:1400].max()
+
+
+@pytest.mark.parametrize("bad", [np.nan, np.inf, -np.inf])
+@pytest.mark.parametrize("which", ["q", "v"])
+def test_a_state_that_is_not_finite_is_refused_and_changes_nothing(bad, which):
+    """The next good state gets the torque it would have got."""
+    control, other = holding(), holding()
+    for c in (control, other):
+        c.activate(0.0, BENT, STILL)
+    state = {"q": BENT.copy(), "v": STILL.copy()}
+    state[which][1] = bad
+    with pytest.raises(InputError, match="finite"):
+        control.step(0.001, **state)
+    np.testing.assert_array_equal(
+        control.step(0.002, BENT, STILL).torque, other.step(0.002, BENT, STILL).torque
+    )
+
+
+@pytest.mark.parametrize("q", [np.zeros(2), np.zeros((3, 1)), [], [0.0, 0.0, 0.0, 0.0]])
+def test_a_state_of_the_wrong_shape_is_refused(q):
+    """The message names the joints."""
+    control = holding()
+    control.activate(0.0, BENT, STILL)
+    with pytest.raises(InputError, match="j1, j2, j3"):
+        control.step(0.0, q, STILL)
+
+
+def test_nothing_works_before_activation():
+    """Each call says what to do first."""
+    control = holding()
+    for call in (
+        lambda: control.step(0.0, BENT, STILL),
+        lambda: control.start(0.0),
+        lambda: control.hold(0.0),
+    ):
+        with pytest.raises(InputError, match=r"activate\(t, q, v\)"):
+            call()
+
+
+def test_activation_reports_everything_at_once():
+    """Outside a limit, moving, away from both references."""
+    control = planar()
+    with pytest.raises(InputError) as caught:
+        control.activate(0.0, np.array([3.1, 0.9, 0.5]), np.array([0.0, 0.2, 0.0]))
+    text = str(caught.value)
+    for words in ("j1 is outside", "j2 is moving", "away from tip", "'joints' starts away from joint j1"):
+        assert words in text
+    with pytest.raises(InputError, match="not active"):
+        control.step(0.0, BENT, STILL)
+
+
+def test_gravity_by_driver_is_left_out_but_counted():
+    """The command lacks gravity; the sum with it stays within the limit."""
+    plain, shared = holding(), holding(gravity_by_driver=True)
+    data = plain.arm.data()
+    arms.dynamics(plain.arm, data, BENT, STILL)
+    for control in (plain, shared):
+        control.activate(0.0, BENT, STILL)
+    a, b = (c.step(0.001, BENT + 0.01, STILL) for c in (plain, shared))
+    arms.dynamics(plain.arm, data, BENT + 0.01, STILL)
+    np.testing.assert_allclose(a.torque - b.torque, data.g, atol=1e-12)
+    far = shared.step(0.002, BENT + 0.5, STILL)
+    arms.dynamics(plain.arm, data, BENT + 0.5, STILL)
+    assert np.all(np.abs(far.torque + data.g) <= shared.arm.torque_limit + 1e-9)
+
+
+vectors = arrays(float, 4, elements=st.floats(-100, 100))
+
+
+@given(vectors, vectors, arrays(float, 4, elements=st.floats(0.1, 50)))
+def test_torque_limits_cut_feedback_before_feed_forward(feed_forward, feedback, limit):
+    """Never beyond the limit; feedback scaled as one vector; feed-forward whole where it fits."""
+    torque, limited = limit_torque(feed_forward, feedback, limit)
+    assert np.all(np.abs(torque) <= limit)
+    fits = np.all(np.abs(feed_forward + feedback) <= limit)
+    assert limited == (not fits)
+    if fits:
+        np.testing.assert_array_equal(torque, feed_forward + feedback)
+    elif np.all(np.abs(feed_forward) <= limit):
+        part = torque - feed_forward
+        length = np.dot(feedback, feedback)
+        scale = np.dot(part, feedback) / length if length > 1e-12 else 0.0
+        assert -1e-9 <= scale <= 1.0 + 1e-9
+        np.testing.assert_allclose(part, scale * feedback, atol=1e-9)  # same direction
+        if length > 1e-12 and np.abs(feedback).max() > 1e-6:  # as much of it as fits
+            more = np.abs(feed_forward + (scale + 1e-3) * feedback)
+            assert np.any(more > limit - 1e-9)
+
+
+def test_a_command_reports_every_task_in_order():
+    """Names, shapes and ranges of the telemetry."""
+    control = seven_axes()
+    command = control.evaluate(0.5, REST, np.zeros(7))
+    assert (
+        list(command.tasks) == ["radius", "height", "along", "zyz", "xyz", "posture"] == list(control.names)
+    )
+    assert [report.error.shape for report in command.tasks.values()] == [(1,), (1,), (2,), (3,), (3,), (7,)]
+    assert abs(command.share_sum - 7.0) < 1e-9
+    for report in command.tasks.values():
+        assert 0.0 <= report.share <= 7.0
+        assert 0.0 <= report.validity <= 1.0
+        assert report.apparent_inertia > 0.0
+        assert np.isinf(report.apparent_inertia) == (report.share == 0.0)
+
+
+def test_reports_of_one_cycle_are_not_overwritten_by_the_next():
+    """A telemetry thread may read them later."""
+    control = holding()
+    control.activate(0.0, BENT, STILL)
+    first = control.step(0.001, BENT + 0.01, STILL)
+    kept = (first.torque.copy(), first.tasks["pen"].error.copy(), first.joint_velocity_reference.copy())
+    control.step(0.002, BENT - 0.02, STILL)
+    for now, before in zip(
+        (first.torque, first.tasks["pen"].error, first.joint_velocity_reference), kept, strict=True
+    ):
+        np.testing.assert_array_equal(now, before)
