@@ -21,6 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from prioritized_tracking.core.references.splines import Cubic
+from prioritized_tracking.errors import InputError, Problem
 
 Array: TypeAlias = NDArray[np.float64]
 

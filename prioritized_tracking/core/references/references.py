@@ -32,9 +32,13 @@ from prioritized_tracking.core.references.paths import (
     frozen,
     number_of_passes,
 )
-from prioritized_tracking.core.references.pose_curve import PoseSample, pose_at, pose_magnitudes
+from prioritized_tracking.core.references.pose_curve import (
+    PoseSample,
+    check_norms,
+    pose_at,
+    pose_magnitudes,
+)
 from prioritized_tracking.core.references.splines import Cubic
-from prioritized_tracking.errors import InputError, Problem
 
 __all__ = ["JointHold", "JointPath", "JointSample", "PoseHold", "PosePath", "PoseSample"]
 
