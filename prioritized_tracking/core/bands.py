@@ -67,7 +67,7 @@ def whitened_rows(arm: Arm, charts: Sequence[PlacedChart]) -> list[Array]:
                 rows = np.eye(arm.n)[list(chart.indices)]
             else:
                 frame_motion(arm, data, arm.frame_id(frame), arm.frame_id(base), R, p, J)
-                work = ChartWork(len(chart.coordinates), 6)
+                work = ChartWork.allocate(len(chart.coordinates), 6)
                 chart.track(R, p, R, p, V, work)
                 rows = work.rows @ J
             jacobians.append(rows @ whiten)

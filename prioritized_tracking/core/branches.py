@@ -15,6 +15,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 
 #: At most this many branches are carried from one task to the next.
@@ -42,28 +43,6 @@ class Gains(NamedTuple):
     has_posture: bool
     posture_damping: float
     claim_speed: Array
-
-
-class Claims(NamedTuple):
-    """
-    What the tasks want in one state.
-
-    L, L_inverse : (n, n) Cholesky factor of the inertia matrix M = L Lᵀ, and its inverse.
-    J : (m, n) task Jacobians c · rows · J_frame.
-    nu : (m,) task reference velocities ν_r, m/s or rad/s.
-    validity : (r,) c of each chart task.
-    posture : (n,) reference velocity of the posture task, q̇_d − k_p x̃, rad/s.
-    posture_feed_forward : (n,) its q̇_d alone, rad/s.
-
-    """
-
-    L: Array
-    L_inverse: Array
-    J: Array
-    nu: Array
-    validity: Array
-    posture: Array
-    posture_feed_forward: Array
 
 
 class Branches(NamedTuple):
@@ -106,6 +85,7 @@ def allocate_branches(n: int, r: int, most_rows: int) -> Branches:
     )
 
 
+@compiled
 def root(branches: Branches, n: int) -> None:
     """
     The one branch before the first task: nothing owned, N_1 = I.
@@ -122,6 +102,7 @@ def root(branches: Branches, n: int) -> None:
     branches.push[0] = 0.0
 
 
+@compiled
 def copy_branch(branches: Branches, a: int, b: int, weight: float) -> None:
     """
     Copy branch a to place b, with a new weight.
@@ -136,6 +117,7 @@ def copy_branch(branches: Branches, a: int, b: int, weight: float) -> None:
     branches.push[b] = branches.push[a]
 
 
+@compiled
 def prune(branches: Branches, count: int) -> int:
     """
     Keep at most ``MOST_BRANCHES``: subtract the next weight from all, drop what is not positive.
@@ -160,6 +142,7 @@ def prune(branches: Branches, count: int) -> int:
     return kept
 
 
+@compiled
 def blend(branches: Branches, count: int, report: Array, D: Array, push: Array) -> None:
     """
     Weighted sums over branches: shares, feedback and push.

@@ -13,6 +13,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from prioritized_tracking.core import branches as br
+from prioritized_tracking.core.claims import Claims
 from prioritized_tracking.core.hierarchy import hierarchy
 from tests.textbook import TextbookTask, blended
 
@@ -40,7 +41,7 @@ def solve(M, tasks, posture=None, posture_damping=0.0, claim_speed=None):
         posture_damping=posture_damping,
         claim_speed=np.full(n, np.inf) if claim_speed is None else claim_speed,
     )
-    claims = br.Claims(
+    claims = Claims(
         L=L,
         L_inverse=np.linalg.inv(L),
         J=np.vstack([task.J for task in tasks]),

@@ -13,7 +13,8 @@ from scipy.spatial.transform import Rotation
 
 from prioritized_tracking.charts import Cylindrical, Position
 from prioritized_tracking.core import arm as arms
-from prioritized_tracking.core.laws import LAWS, TWIN_STEP
+from prioritized_tracking.core.kernel import TWIN_STEP
+from prioritized_tracking.core.laws import LAWS
 from prioritized_tracking.core.references import JointHold, PoseHold
 from tests.arms import planar_arm
 from tests.stacks import controller, planar, seven_axes, task
@@ -81,7 +82,7 @@ def test_torque_equals_the_textbook_form(make):
         command = control.evaluate(1.1, q, v)
         outcomes = []
         for evaluation in (control._here, control._there):
-            claims = evaluation.claims
+            claims = evaluation.room.claims
             tasks = [
                 TextbookTask(claims.J[a:b], claims.nu[a:b], claims.validity[i], item.damping, item.handover)
                 for i, (item, a, b) in enumerate(
@@ -99,7 +100,7 @@ def test_torque_equals_the_textbook_form(make):
         np.testing.assert_allclose(command.joint_velocity_reference, velocity, atol=1e-8)
         # 1e-6: two computations of q̇_r agree to 1e-12, divided by the step of 1e-6 s
         np.testing.assert_allclose(command.torque, expected, atol=2e-5 * max(1.0, np.abs(expected).max()))
-        np.testing.assert_allclose(control.law.report[0], outcomes[0].shares, atol=1e-9)
+        np.testing.assert_allclose(control.law.outcome.report[0], outcomes[0].shares, atol=1e-9)
 
 
 def test_reference_acceleration_is_the_derivative_of_the_reference_velocity():
@@ -166,10 +167,14 @@ def test_push_acts_through_the_jacobian_of_what_is_owned():
     pen = task("pen", Position(axes="xy"), "tip", "base", handover=(1e6, 1e7), force=np.array([3.0, -2.0]))
     control = controller(arm, [pen], tool=PoseHold(np.eye(3), np.zeros(3)), joints=JointHold(q))
     control.evaluate(0.0, q, np.zeros(3))
-    here, s = control._here, np.zeros(3)
-    torque = control.law.feedback(here, s, 1.0)
-    np.testing.assert_allclose(torque, here.poses[0][2][:2].T @ [3.0, -2.0], atol=1e-9)
-    np.testing.assert_allclose(control.law.feedback(here, s, 0.25), 0.25 * torque, atol=1e-12)
+    here, there, still = control._here, control._there, np.zeros(3)
+    feedback = {}
+    for scale in (0.0, 0.25, 1.0):
+        control.law.torque(here, there, still, scale)
+        feedback[scale] = control.law.outcome.feedback.copy()
+    push = here.poses[0][2][:2].T @ [3.0, -2.0]
+    np.testing.assert_allclose(feedback[1.0] - feedback[0.0], push, atol=1e-9)
+    np.testing.assert_allclose(feedback[0.25] - feedback[0.0], 0.25 * push, atol=1e-9)
 
 
 @pytest.mark.parametrize("law", sorted(LAWS))
@@ -210,7 +215,7 @@ def test_cartesian_impedance_formula():
         np.testing.assert_allclose(J @ np.linalg.solve(M, rest), 0.0, atol=1e-6)
         # rest = Nᵀ M a with N = I − J# J: twice projected is the same
         inverse = np.linalg.solve(M, J.T) @ np.linalg.pinv(J @ np.linalg.solve(M, J.T))
-        posture = M @ (-320.0 * (q - control._here.q_d) - 40.0 * v)
+        posture = M @ (-320.0 * (q - control._here.room.q_d) - 40.0 * v)
         np.testing.assert_allclose(rest, posture - J.T @ (inverse.T @ posture), atol=1e-5)
 
 
