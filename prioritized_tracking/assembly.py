@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from prioritized_tracking import compiled
 from prioritized_tracking.assembly_references import build_channels, check_joint_path, pose_path, solve
 from prioritized_tracking.charts import registry
 from prioritized_tracking.charts.base import Chart
@@ -99,7 +100,19 @@ def build_controller(file: StackFile, *, progress: Progress | None = None) -> Co
         f"reference {name}: {text}" for name, c in channels.items() if c.path for text in c.path.messages
     ]
     controller.notes = (*file.warnings, *builder.arm.warnings, *builder.notes, *heard)
+    _warm_up(controller, progress)
     return controller
+
+
+def _warm_up(controller: Controller, progress: Progress | None) -> None:
+    """
+    Run the law once, so that nothing is compiled in the first cycle.
+
+    """
+    if progress is not None and compiled.is_cold():
+        progress(0.0, "compiling the control law, once")
+    q = controller.start_configuration()
+    compiled.warm_up(lambda: controller.evaluate(0.0, q, np.zeros_like(q)))
 
 
 def compute_companion(

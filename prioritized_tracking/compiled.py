@@ -14,6 +14,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import pickle
 import shutil
 import time
 from collections.abc import Callable
@@ -125,17 +126,36 @@ def is_compiled() -> bool:
 
 def is_cold() -> bool:
     """
-    Whether the first call will have to compile, which takes half a minute.
+    Whether the first call will have to compile, which takes about half a minute.
 
     """
     return FOLDER is not None and not any(FOLDER.rglob("*.nbi"))
 
 
-def forget() -> None:
+def warm_up(use: Callable[[], object]) -> None:
     """
-    Throw away what was compiled, after it turned out to be damaged.
+    Call what uses compiled functions, so that all of them are compiled, or read from the cache, now.
+
+    Optimised a little less than numba would: twice as quick to compile, as quick to run. What turns
+    out to be damaged in the cache is thrown away and compiled again.
+
+    Parameters
+    ----------
+    use : calls every function that will be needed, with arguments of the same types.
 
     """
-    if FOLDER is not None:
-        for path in FOLDER.rglob("*.nb*"):
-            path.unlink(missing_ok=True)
+    if _numba is None:
+        use()
+        return
+    level = _numba.config.OPT
+    if "NUMBA_OPT" not in os.environ:
+        _numba.config.OPT = type(level)(2)
+    try:
+        try:
+            use()
+        except (EOFError, pickle.UnpicklingError, OSError, IndexError, KeyError, AttributeError):
+            for path in FOLDER.rglob("*.nb*") if FOLDER is not None else ():
+                path.unlink(missing_ok=True)
+            use()
+    finally:
+        _numba.config.OPT = level

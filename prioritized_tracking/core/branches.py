@@ -86,9 +86,14 @@ def allocate_branches(n: int, r: int, most_rows: int) -> Branches:
 
 
 @compiled
-def root(branches: Branches, n: int) -> None:
+def root(branches: Branches, n: int) -> int:
     """
     The one branch before the first task: nothing owned, N_1 = I.
+
+    Returns
+    -------
+    int
+        1, the number of branches.
 
     """
     branches.weight[0] = 1.0
@@ -100,6 +105,7 @@ def root(branches: Branches, n: int) -> None:
     branches.u[0] = 0.0
     branches.feedback[0] = 0.0
     branches.push[0] = 0.0
+    return int(branches.weight[0])  # not a literal, which would compile every caller twice
 
 
 @compiled
@@ -130,8 +136,12 @@ def prune(branches: Branches, count: int) -> int:
         How many are left; their weights sum to 1 again.
 
     """
-    threshold = np.sort(branches.weight[:count])[count - 1 - MOST_BRANCHES]
-    tie = branches.weight[:count].max() <= threshold
+    weights = branches.weight[:count].copy()
+    threshold = 0.0  # the largest weight that at least MOST_BRANCHES others reach
+    for b in range(count):
+        if weights[b] > threshold and (weights >= weights[b]).sum() > MOST_BRANCHES:
+            threshold = weights[b]
+    tie = weights.max() <= threshold
     kept = 0
     for b in range(count):
         weight = branches.weight[b] if tie else branches.weight[b] - threshold

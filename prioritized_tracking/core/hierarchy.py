@@ -53,8 +53,7 @@ def hierarchy(gains: Gains, claims: Claims, branches: Branches, with_feedback: b
     """
     J_hat = claims.J @ claims.L_inverse.T
     feed_forward = claims.posture_feed_forward @ claims.L
-    root(branches, claims.L.shape[0])
-    count = 1
+    count = root(branches, claims.L.shape[0])
     pruned = False
     for i in range(claims.validity.shape[0]):
         rows = J_hat[gains.first_row[i] : gains.first_row[i + 1]]
@@ -302,7 +301,7 @@ def own(
         branches.u[b] += ((1.0 - h) * y) @ B + g_0 + limited(g - g_0, claims.L_inverse, gains.claim_speed)
     branches.N[b] -= B.T @ B
     if with_feedback:
-        owned = U[:, :j]
+        owned = np.ascontiguousarray(U[:, :j])
         K = (owned.T * gains.damping[first:last]) @ owned / claims.validity[i] ** 2
         branches.feedback[b] += UA[:j].T @ (K @ UA[:j]) + (B.T * (h * gains.posture_damping)) @ B
         branches.push[b] += (gains.force[first:last] @ owned) @ UA[:j]

@@ -99,14 +99,17 @@ def prioritized_torque(
     count, pruned : see ``reference_velocity``; with count 0 the torque is zero and means nothing.
 
     """
-    count, pruned = reference_velocity(layout, gains, here, here, branches, False)
-    if count > 0:
-        blend(branches, count, outcome.report, outcome.D, outcome.push)
-        for k in range(v.shape[0]):
-            outcome.D[k, k] += feedback_floor
-        twin_count, _ = reference_velocity(layout, gains, there, here, branches, True)
-        if twin_count == 0:
+    count, pruned = 0, False
+    for twin in (False, True):
+        found, many = reference_velocity(layout, gains, there if twin else here, here, branches, twin)
+        if found == 0:
             count = 0
+            break
+        if not twin:
+            count, pruned = found, many
+            blend(branches, count, outcome.report, outcome.D, outcome.push)
+            for k in range(v.shape[0]):
+                outcome.D[k, k] += feedback_floor
     acceleration = (there.velocity - here.velocity) / TWIN_STEP
     outcome.feed_forward[:] = inverse_dynamics(terms, here.velocity, acceleration)
     L = here.claims.L

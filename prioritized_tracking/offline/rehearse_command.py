@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any
 
 import prioritized_tracking as pt
+from prioritized_tracking import compiled
 from prioritized_tracking.errors import InputError, Problem, nearest
 from prioritized_tracking.offline.overrides import parse_overrides
 from prioritized_tracking.offline.progress import cycle_bar, fraction_bar
@@ -69,7 +70,7 @@ def run(
     if problems := _window_problems(seconds, settle):
         raise InputError(problems)
     _prepare(folder, first.stack_file.text)
-    notes = notes_of(first)
+    notes = [*first.notes, f"control law {compiled.STATUS}"]
     for note in notes:
         print(f"note: {note}")
     runs, interrupted = _run_all(controllers, folder, seconds)
@@ -104,17 +105,6 @@ def _checked_arguments(
     if problems:
         raise InputError(problems)
     return changes
-
-
-def notes_of(controller: Any) -> list[str]:
-    """
-    Return what loading had to say: values computed, implausible inputs accepted, changes to the time of a
-    path.
-
-    """
-    paths = {name: channel.path for name, channel in controller.channels.items() if channel.path is not None}
-    messages = [f"reference {name}: {text}" for name, path in paths.items() for text in path.messages]
-    return [*controller.stack_file.warnings, *controller.notes, *messages]
 
 
 def _load(stack: str, laws: Sequence[str], changes: dict[str, Any]) -> dict[str, Any]:
