@@ -111,8 +111,7 @@ def _warm_up(controller: Controller, progress: Progress | None) -> None:
     """
     if progress is not None and compiled.is_cold():
         progress(0.0, "compiling the control law, once")
-    q = controller.start_configuration()
-    compiled.warm_up(lambda: controller.evaluate(0.0, q, np.zeros_like(q)))
+    compiled.warm_up(controller.rehearse_one_cycle)
 
 
 def compute_companion(

@@ -195,6 +195,17 @@ class Controller:
         outcome = self._law(q, v, self._references.at_path_time(t, self._holder(q)), 1.0)
         return self._command(outcome.feed_forward + outcome.feedback, False)
 
+    def rehearse_one_cycle(self) -> None:
+        """
+        Go through everything a cycle needs, at the start of the references, without sending anything.
+
+        """
+        q = self.start_configuration()
+        self._samples = self._references.at_path_time(0.0, self._holder(q))
+        outcome = self._law(q, np.zeros_like(q), self._samples, 1.0)
+        self._command(limit_torque(outcome.feed_forward, outcome.feedback, self._torque_limit)[0], False)
+        self.pose_errors(q)
+
     def _law(self, q: Array, v: Array, samples: Samples, push_scale: float) -> Outcome:
         """
         Evaluate the stack at the state and, for tracking laws, at its twin; then the law.
