@@ -14,6 +14,9 @@ import numpy as np
 from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 
+#: No joint is at so many radians, or that fast (rad/s); a message with such a number is damaged.
+HUGE = 1e6
+
 
 @dataclass(slots=True, eq=False)
 class TaskReport:
@@ -83,6 +86,15 @@ class Command:
 
         """
         return float(self._report[0].sum())
+
+
+@compiled
+def usable(values: Array) -> bool:
+    """
+    Whether all joint positions or velocities are finite and below ``HUGE``.
+
+    """
+    return bool((np.abs(values) < HUGE).all())
 
 
 @compiled
