@@ -102,6 +102,23 @@ def test_rehearse_writes_its_results_and_says_pass(command, folder):
         assert tuple(stored["joints"]) == ("shoulder", "elbow")
 
 
+def test_a_note_is_said_once(command, folder):
+    """Also a warning about the file, and what is said of a path (here: that it is ramped in time)."""
+    path, stack = folder / "reach_limit.csv", folder / "planar_stack.yaml"
+    header, *rows = path.read_text().splitlines()
+    path.write_text("\n".join([header, *rows[60:-60]]))
+    text = stack.read_text()
+    stack.write_text(text[: text.index("      stretch: {")] + "      stretch: {kind: joints, source: hold}\n")
+    changes = ("robot.velocity_cutoff=100.0", "guard.start_position=0.99", "guard.start_angle=3.1")
+    words = [word for change in changes for word in ("--set", change)]
+    code, text, errors = command("rehearse", "STACK", "--out", folder / "out", "--seconds", 0.02, *words)
+    assert code in (0, 1), errors
+    notes = summary_of(folder / "out")["notes"]
+    assert any("velocity_cutoff" in note for note in notes)
+    assert any("ramped" in note for note in notes)
+    assert text.count("note: ") == len(notes) == len(set(notes))
+
+
 def test_same_seed_same_numbers(command, folder):
     words = ("--seconds", 0.2, "--set", "plant.mass_error=0.1", "--set", "plant.position_noise=1e-5")
     summaries = []

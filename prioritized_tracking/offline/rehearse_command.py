@@ -69,7 +69,7 @@ def run(
     if problems := _window_problems(seconds, settle):
         raise InputError(problems)
     _prepare(folder, first.stack_file.text)
-    notes = notes_of(first)
+    notes = list(first.notes)
     for note in notes:
         print(f"note: {note}")
     runs, interrupted = _run_all(controllers, folder, seconds)
@@ -104,17 +104,6 @@ def _checked_arguments(
     if problems:
         raise InputError(problems)
     return changes
-
-
-def notes_of(controller: Any) -> list[str]:
-    """
-    Return what loading had to say: values computed, implausible inputs accepted, changes to the time of a
-    path.
-
-    """
-    paths = {name: channel.path for name, channel in controller.channels.items() if channel.path is not None}
-    messages = [f"reference {name}: {text}" for name, path in paths.items() for text in path.messages]
-    return [*controller.stack_file.warnings, *controller.notes, *messages]
 
 
 def _load(stack: str, laws: Sequence[str], changes: dict[str, Any]) -> dict[str, Any]:
