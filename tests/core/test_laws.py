@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
 
-from prioritized_tracking.charts import Cylindrical, Position
+from prioritized_tracking.charts import Cylindrical, Euler, Joints, Position
 from prioritized_tracking.core import arm as arms
 from prioritized_tracking.core.laws import LAWS, TWIN_STEP
 from prioritized_tracking.core.references import JointHold, PoseHold
@@ -116,20 +116,53 @@ def test_reference_acceleration_is_the_derivative_of_the_reference_velocity():
         np.testing.assert_allclose(command.torque, expected, atol=1e-2 * (1.0 + np.abs(expected).max()))
 
 
-def test_the_twin_keeps_the_turn_of_an_angle():
-    """An azimuth just below π moves across it: the torque is that of a little before, not 2π/1e-6 larger."""
-    arm = planar_arm((0.5, 0.4, 0.3))
-    turn = task("round", Cylindrical(), "tip", "base")
-    tip = np.array([0.2, 0.5, 0.3])
-    control = controller(arm, [turn], tool=PoseHold(np.eye(3), [-0.7, 0.3, 0.0]), joints=JointHold(tip))
-    frame, base = arm.frame_id("tip"), arm.frame_id("base")
-    azimuth = float(np.arctan2(*control.pose(frame, base, tip)[1][[1, 0]]))
+def turning(what, before):
+    """
+    An arm whose first joint turns at 1 rad/s, and an error that is ``before`` short of π: (controller, q).
+
+    """
+    arm = planar_arm((0.5, 0.4, 0.3), kind="continuous")
+    q = np.array([0.2, 0.5, 0.3])
+    R, p = controller(arm, []).pose(arm.frame_id("tip"), arm.frame_id("base"), q)
+    back = Rotation.from_rotvec([0.0, 0.0, before - np.pi]).as_matrix()  # where the error is π − before
+    goal = q + [before - np.pi, 0.0, 0.0]
+    elbow = Joints(names=["j1"])
+    elbow.bind(arm.joints, (True, True, True))
+    tasks = {
+        "cylindrical": [task("round", Cylindrical(), "tip", "base")],
+        "euler": [task("turn", Euler(sequence="xyz"), "tip", "base")],
+        "joints": [task("elbow", elbow, "", "", reference="joints")],
+        "posture": [],
+    }[what]
+    held = JointHold(goal if what in ("joints", "posture") else q)
+    return controller(arm, tasks, tool=PoseHold(back @ R, back @ p), joints=held), q
+
+
+@pytest.mark.parametrize("what", ["cylindrical", "euler", "joints", "posture"])
+def test_the_twin_keeps_the_turn_of_an_angle(what):
+    """
+    An error crosses π between the state and its twin: q̈_r sees its velocity, not a jump of 2π in 1e-6 s.
+
+    """
     torques = []
-    for before in (3e-7, 1e-3):  # azimuth left to π; the twin moves on by 1e-6 rad
-        q = tip + [np.pi - azimuth - before, 0.0, 0.0]
-        torques.append(control.evaluate(0.0, q, np.array([1.0, 0.0, 0.0])).torque)
-    assert np.abs(torques[0]).max() < 1e3
+    for before in (3e-7, 1e-3):  # the twin moves on by 1e-6 rad: across π, and not
+        control, q = turning(what, before)
+        command = control.evaluate(0.0, q, np.array([1.0, 0.0, 0.0]))
+        error = next(iter(command.tasks.values())).error
+        np.testing.assert_allclose(np.abs(error).max(), np.pi - before, atol=1e-12)
+        torques.append(command.torque)
+    # the error differs by 1e-3 of π; a jump would add M k_p 2π/1e-6, some 1e7 N·m
     np.testing.assert_allclose(torques[0], torques[1], rtol=0.02, atol=0.5)
+
+
+@pytest.mark.parametrize("what", ["joints", "posture"])
+def test_a_whole_turn_of_a_joint_without_end_makes_no_difference(what):
+    """The errors go the short way round; a joint with limits has to turn back."""
+    torques = []
+    for turns in (0, 1, -2):
+        control, q = turning(what, 2.5)
+        torques.append(control.evaluate(0.0, q + [2 * np.pi * turns, 0.0, 0.0], np.ones(3)).torque)
+    np.testing.assert_allclose(torques[1:], torques[:1] * 2, atol=1e-5)  # 4e-16 · 2π · M k_p / 1e-6 and less
 
 
 def test_a_stiff_position_task_reads_as_an_impedance():
