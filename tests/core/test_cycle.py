@@ -91,6 +91,21 @@ def test_paths_wait_for_start_and_hold_brakes_along_them():
     assert np.linalg.norm(reference(11.0) - reference(10.0)) > 1e-3
 
 
+def test_each_frame_holds_where_it_is_itself():
+    """Two frames, each with a channel that holds: no task has an error at activation."""
+    arm = planar_arm((0.5, 0.4, 0.3))
+    tasks = [
+        task(name, Position(axes="xy"), frame, "base", reference=name)
+        for name, frame in (("pen", "tip"), ("elbow", "link2"))
+    ]
+    plain = controller(arm, tasks)
+    channels = {name: replace(plain.channels["tool"], leader=name) for name in ("pen", "elbow")}
+    control = Controller(arm, plain.stack, {**channels, "joints": plain.channels["joints"]})
+    control.activate(0.0, BENT, STILL)
+    for report in control.step(0.001, BENT, STILL).tasks.values():
+        np.testing.assert_allclose(report.error, 0.0, atol=1e-15)
+
+
 def started_apart(**changes):
     """The planar arm with changed channels, activated at 0: {name: keywords of Channel}."""
     plain = planar()
