@@ -71,6 +71,7 @@ ONE_FAULT: list[tuple[Change, str, str, str]] = [
     (("[60.0, 600.0]", "[600.0, 60.0]"), "tasks.seam_radius.handover", "the band does not rise", "[600, 60]"),
     (("[60.0, 600.0]", "[60.0, 60.0]"), "tasks.seam_radius.handover", "the band does not rise", "[60, 60]"),
     (("[60.0, 600.0]", "[0.0, 60.0]"), "tasks.seam_radius.handover", "out of range", "greater than 0"),
+    (("[60.0, 600.0]", "[60.0, 1.0e17]"), "tasks.seam_radius.handover", "out of range", "less than 1000000000"),
     (("[60.0, 600.0]", "[60.0]"), "tasks.seam_radius.handover", "wrong length", "of length 2"),
     (("rate: 1000.0", "rate: 0.0"), "rate", "out of range", "at least 50"),
     (("pace: 1.0", "pace: 0.001"), "references.weld.pace", "out of range", "at least 0.01"),
