@@ -7,13 +7,15 @@ The laws on whole arms: the Lyapunov function, the textbook form, the baselines'
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
 
 from prioritized_tracking.charts import Cylindrical, Euler, Joints, Position
 from prioritized_tracking.core import arm as arms
-from prioritized_tracking.core.laws import LAWS, TWIN_STEP
+from prioritized_tracking.core.laws import LAWS, TWIN_STEP, ToolGains
 from prioritized_tracking.core.references import JointHold, PoseHold
 from tests.arms import planar_arm
 from tests.stacks import controller, planar, seven_axes, task
@@ -245,6 +247,24 @@ def test_cartesian_impedance_formula():
         inverse = np.linalg.solve(M, J.T) @ np.linalg.pinv(J @ np.linalg.solve(M, J.T))
         posture = M @ (-320.0 * (q - control._here.q_d) - 40.0 * v)
         np.testing.assert_allclose(rest, posture - J.T @ (inverse.T @ posture), atol=1e-5)
+
+
+def test_tool_gains_are_the_largest_of_the_highest_task_of_each_kind():
+    """Of arrays the maximum; of several tasks on the tool the first; other frames do not count."""
+    plain = seven_axes()
+    frame, base = plain.stack.motions[0]
+    gains = {"stiffness": np.array([10.0, 30.0, 20.0]), "damping": np.array([2.0, 1.0, 3.0])}
+    tasks = (
+        replace(task("turn", Euler(), frame, base), **gains),
+        task("elbow", Position(), "panda_link4", base, stiffness=999.0),
+        replace(task("tip", Position(), frame, base), stiffness=np.array([5.0, 7.0, 6.0])),
+        task("again", Position(), frame, base, stiffness=888.0),
+    )
+    tool = ToolGains(replace(plain.stack, tasks=tasks))
+    order = np.argsort(tool.rows)  # rows of the Jacobian: translation, then rotation
+    np.testing.assert_array_equal(tool.rows[order], np.arange(6))
+    np.testing.assert_array_equal(tool.stiffness[order], [7.0] * 3 + [30.0] * 3)
+    np.testing.assert_array_equal(tool.damping[order], [100.0] * 3 + [3.0] * 3)
 
 
 def test_inverse_jacobian_reaches_the_tool_velocity_exactly():
