@@ -20,6 +20,7 @@ from prioritized_tracking.files import (
     read_joints_csv,
     read_pose_csv,
     read_text,
+    whole_file,
     write_joints_csv,
     write_pose_csv,
     write_text,
@@ -340,6 +341,20 @@ def test_writing_replaces_the_whole_file(tmp_path):
     write_text(path, "long text\n" * 100)
     write_text(path, "r\u00f6hre\r\n")
     assert path.read_bytes() == "r\u00f6hre\r\n".encode()
+    assert list(tmp_path.iterdir()) == [path]
+
+
+def test_two_processes_may_write_one_file(tmp_path, monkeypatch):
+    """As two rehearsals that compute the same companion: each moves its own draft, whole, into place."""
+    path = tmp_path / "a.txt"
+    with whole_file(path) as mine:
+        mine.write(b"mine, begun first, ")
+        with monkeypatch.context() as other:
+            other.setattr("os.getpid", lambda: -1)
+            write_text(path, "theirs")
+        assert path.read_text() == "theirs"
+        mine.write(b"ended last")
+    assert path.read_text() == "mine, begun first, ended last"
     assert list(tmp_path.iterdir()) == [path]
 
 

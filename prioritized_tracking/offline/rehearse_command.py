@@ -14,11 +14,11 @@ from typing import Any
 
 import prioritized_tracking as pt
 from prioritized_tracking.errors import InputError, Problem, nearest
+from prioritized_tracking.files import whole_file
 from prioritized_tracking.offline.overrides import parse_overrides
 from prioritized_tracking.offline.progress import cycle_bar, fraction_bar
 from prioritized_tracking.offline.rehearse import SETTLE_S, default_seconds, rehearse
 from prioritized_tracking.offline.run import Run
-from prioritized_tracking.offline.signals import whole_file
 from prioritized_tracking.offline.summary import summarise, to_json
 from prioritized_tracking.offline.table import laws_table, tasks_table
 
