@@ -195,7 +195,7 @@ def test_feedback_floor_adds_to_every_direction():
 
 
 def test_push_acts_through_the_jacobian_of_what_is_owned():
-    """A regular top task pushes with Jᵀ F; the torque of a lower one leaves the higher task's force alone."""
+    """A regular top task pushes with Jᵀ F, ramped."""
     arm = planar_arm((0.5, 0.4, 0.3))
     q = np.array([0.3, 0.8, 0.4])
     pen = task("pen", Position(axes="xy"), "tip", "base", handover=(1e6, 1e7), force=np.array([3.0, -2.0]))
@@ -205,6 +205,26 @@ def test_push_acts_through_the_jacobian_of_what_is_owned():
     torque = control.law.feedback(here, s, 1.0)
     np.testing.assert_allclose(torque, here.poses[0][2][:2].T @ [3.0, -2.0], atol=1e-9)
     np.testing.assert_allclose(control.law.feedback(here, s, 0.25), 0.25 * torque, atol=1e-12)
+
+
+def test_push_of_a_lower_task_does_not_accelerate_a_higher_one():
+    """J_1 M⁻¹ τ = 0 (dynamic consistency, Khatib 1987); along itself it pushes what is left of the task."""
+    arm = planar_arm((0.5, 0.4, 0.3))
+    q = np.array([0.3, 0.8, 0.4])
+    x, y = (
+        task(axis, Position(axes=axis), "tip", "base", handover=(1e6, 1e7), force=np.array([force]))
+        for axis, force in (("x", 0.0), ("y", 5.0))
+    )
+    control = controller(arm, [x, y], tool=PoseHold(np.eye(3), np.zeros(3)), joints=JointHold(q))
+    control.evaluate(0.0, q, np.zeros(3))
+    here = control._here
+    torque = control.law.feedback(here, np.zeros(3), 1.0)
+    J = here.poses[0][2][:2]
+    acceleration = J @ np.linalg.solve(here.data.M, torque)
+    np.testing.assert_allclose(acceleration[0], 0.0, atol=1e-10)
+    # what x leaves of y feels the inertia 1/λ, λ = y-element of (J M⁻¹ Jᵀ) less what x has of it
+    G = J @ np.linalg.solve(here.data.M, J.T)
+    np.testing.assert_allclose(acceleration[1], 5.0 * (G[1, 1] - G[0, 1] ** 2 / G[0, 0]), rtol=1e-9)
 
 
 @pytest.mark.parametrize("law", sorted(LAWS))
