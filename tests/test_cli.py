@@ -102,6 +102,16 @@ def test_rehearse_writes_its_results_and_says_pass(command, folder):
         assert tuple(stored["joints"]) == ("shoulder", "elbow")
 
 
+def test_a_refused_run_leaves_a_folder_that_can_be_used(command, folder):
+    """Refused at the start of the first law, when the stack is in the folder already; then repaired."""
+    words = ("rehearse", "STACK", "--out", folder / "out", "--seconds", 0.02)
+    code, _, errors = command(*words, "--set", "plant.start=[0.5, 0.5]")
+    assert code == 2
+    assert "starts away" in errors
+    code, _, errors = command(*words)
+    assert code == 0, errors
+
+
 def test_a_note_is_said_once(command, folder):
     """Also a warning about the file, and what is said of a path (here: that it is ramped in time)."""
     path, stack = folder / "reach_limit.csv", folder / "planar_stack.yaml"
