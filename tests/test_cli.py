@@ -308,6 +308,14 @@ def test_companion_refuses_unsuitable_files(command, folder, out, words):
     assert (folder / "reach_limit.csv").read_bytes() == before
 
 
+def test_companion_leaves_a_device_alone(command, folder):
+    os.mkfifo(folder / "pipe")
+    code, _, errors = command("companion", "STACK", "--out", folder / "pipe")
+    assert code == 2
+    assert "no regular file" in errors
+    assert (folder / "pipe").is_fifo()
+
+
 def test_companion_of_an_unknown_channel(command, folder):
     code, _, errors = command("companion", "STACK", "--out", folder / "new.csv", "--channel", "drawin")
     assert code == 2

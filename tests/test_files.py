@@ -336,6 +336,16 @@ def test_files_that_cannot_be_written(tmp_path, target):
     assert list(tmp_path.iterdir()) == [tmp_path / "folder"]
 
 
+def test_what_is_no_regular_file_is_left_alone(tmp_path):
+    """A file moved over a device (here a pipe; as the superuser also /dev/null) would take its place."""
+    pipe = tmp_path / "pipe"
+    os.mkfifo(pipe)
+    problem = problems(write_joints_csv, pipe, [0.0], ("a",), [[0.0]])[0]
+    assert "cannot be written" in problem.what
+    assert pipe.is_fifo()
+    assert list(tmp_path.iterdir()) == [pipe]
+
+
 def test_writing_replaces_the_whole_file(tmp_path):
     path = tmp_path / "a.txt"
     write_text(path, "long text\n" * 100)

@@ -8,6 +8,7 @@ Files of the user: text read with every refusal named, anything written whole or
 from __future__ import annotations
 
 import contextlib
+import errno
 import os
 import stat
 from collections.abc import Iterator
@@ -160,9 +161,12 @@ def whole_file(path: Path) -> Iterator[IO[bytes]]:
     """
     Open a file for writing so that an interruption leaves the old one or the new one, never half of it.
 
-    The draft beside it is this process's own: another one may be writing the same file.
+    The draft beside it is this process's own: another one may be writing the same file. What is there but
+    no regular file is left alone: moved over a device, the file would take its place for good.
 
     """
+    if path.exists() and not path.is_file():
+        raise OSError(errno.EINVAL, "not a regular file", str(path))
     draft = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:
         with draft.open("wb") as file:
