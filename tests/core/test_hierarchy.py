@@ -93,6 +93,8 @@ def test_equals_the_textbook_form_inside_and_outside_bands(sizes, seed):
     np.testing.assert_allclose(feedback, expected.feedback, atol=PROMISED * np.abs(expected.feedback).max())
     np.testing.assert_allclose(push, expected.push, atol=PROMISED * np.abs(expected.push).max())
     np.testing.assert_allclose(report[0], expected.shares, atol=PROMISED)
+    heaviest = max(expected.leaves)
+    np.testing.assert_allclose(report[1], heaviest[2], rtol=1e-6)  # 1/λ up to 1e5 of an M⁻¹ up to 20
 
 
 def test_some_of_the_random_stacks_have_several_branches():
