@@ -115,10 +115,10 @@ def limit_torque(feed_forward: Array, feedback: Array, limit: Array) -> tuple[Ar
     total = feed_forward + feedback
     if (np.abs(total) <= limit).all():
         return total, False
-    base = np.minimum(np.maximum(feed_forward, -limit), limit)
     scale = 1.0
     for k in range(limit.shape[0]):
-        room = limit[k] - base[k] if feedback[k] > 0.0 else limit[k] + base[k]
-        if abs(feedback[k]) * scale > room:
-            scale = room / abs(feedback[k])
-    return np.minimum(np.maximum(base + scale * feedback, -limit), limit), True
+        # feedback that pulls a feed-forward back inside has the whole range to do so
+        room = limit[k] - feed_forward[k] if feedback[k] > 0.0 else limit[k] + feed_forward[k]
+        if abs(feedback[k]) * scale > max(room, 0.0):
+            scale = max(room, 0.0) / abs(feedback[k])
+    return np.minimum(np.maximum(feed_forward + scale * feedback, -limit), limit), True

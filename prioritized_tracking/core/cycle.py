@@ -45,6 +45,7 @@ class Controller:
     ----------
     joints : names in command order.
     tools : for each controlled frame (frame, base, channel) numbers and name.
+    described : for each controlled frame the units of its tasks, "m" and "rad": what of its pose counts.
     stack_file : the file it was built from; None: built by hand.
     notes : what the user should be told about it.
 
@@ -73,6 +74,9 @@ class Controller:
             task.frame: (arm.frame_id(task.frame), arm.frame_id(task.base), task.reference)
             for task in reversed(stack.tasks)
             if task.chart.kind == "pose"
+        }
+        self.described = {
+            frame: frozenset(task.unit for task in stack.tasks if task.frame == frame) for frame in self.tools
         }
         self.names = tuple(t.name for t in stack.tasks) + ((stack.posture.name,) if stack.posture else ())
         ends = (*stack.first_row, stack.first_row[-1] + arm.n)
@@ -122,10 +126,10 @@ class Controller:
         self._samples = references.at(t)
         starts = {name: self._samples[name].q for name, c in self.channels.items() if c.kind == "joints"}
         problems = state_problems(self.arm, q, v)
-        problems += tool_problems(self.pose_errors(q), self.start_limits)
+        problems += tool_problems(self.pose_errors(q), self.described, self.start_limits)
         problems += joint_problems(self.arm, q, starts, self.start_limits)
         if problems:
-            references.active = False
+            references.deactivate()
             raise InputError(problems)
         if any(channel.at_activation for channel in self.channels.values()):
             references.start(t, only_at_activation=True)

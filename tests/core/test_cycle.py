@@ -15,9 +15,10 @@ from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
-from prioritized_tracking.charts import Position
+from prioritized_tracking.charts import Position, RotationVector
 from prioritized_tracking.core import arm as arms
 from prioritized_tracking.core.cycle import Controller, limit_torque
+from prioritized_tracking.core.references import PoseHold
 from prioritized_tracking.core.start import StartLimits
 from prioritized_tracking.errors import InputError
 from tests.arms import planar_arm
@@ -237,6 +238,30 @@ def test_activation_reports_everything_at_once():
         control.step(0.0, BENT, STILL)
 
 
+@pytest.mark.parametrize(("chart", "free"), [(Position(axes="xy"), "angle"), (RotationVector(), "distance")])
+def test_only_what_tasks_describe_is_judged_at_activation(chart, free):
+    """A pen of which only the position counts may be turned as it likes, and the other way round."""
+    arm = planar_arm((0.5, 0.4, 0.3))
+    R, p = holding().pose(arm.frame_id("tip"), arm.frame_id("base"), BENT)
+    away = {"angle": (np.eye(3), p), "distance": (R, p + [0.3, 0.0, 0.0])}
+    for other, (R_d, p_d) in away.items():
+        control = controller(arm, [task("pen", chart, "tip", "base")], tool=PoseHold(R_d, p_d))
+        if other == free:
+            control.activate(0.0, BENT, STILL)
+        else:
+            with pytest.raises(InputError, match="away from tip"):
+                control.activate(0.0, BENT, STILL)
+
+
+def test_a_refused_activation_leaves_no_hold_behind():
+    """evaluate goes on to hold at the state it is asked about."""
+    control = holding()
+    with pytest.raises(InputError, match="moving"):
+        control.activate(0.0, BENT, STILL + 1.0)
+    for report in control.evaluate(0.0, BENT + 0.3, STILL).tasks.values():
+        np.testing.assert_allclose(report.error, 0.0, atol=1e-15)
+
+
 def test_gravity_by_driver_is_left_out_but_counted():
     """The command lacks gravity; the sum with it stays within the limit."""
     plain, shared = holding(), holding(gravity_by_driver=True)
@@ -273,6 +298,19 @@ def test_torque_limits_cut_feedback_before_feed_forward(feed_forward, feedback, 
         if length > 1e-12 and np.abs(feedback).max() > 1e-6:  # as much of it as fits
             more = np.abs(feed_forward + (scale + 1e-3) * feedback)
             assert np.any(more > limit - 1e-9)
+
+
+def test_the_limited_torque_has_no_step_where_a_limit_begins_to_act():
+    """
+    Joint 1 is beyond its limit but for the feedback, as joint 2 reaches its own.
+
+    """
+    torques = [
+        limit_torque(np.array([120.0, 0.0]), np.array([-30.0, 100.0 + e]), np.full(2, 100.0))[0]
+        for e in (-1e-9, 1e-9)
+    ]
+    np.testing.assert_allclose(torques[0], [90.0, 100.0], atol=1e-6)
+    np.testing.assert_allclose(torques[1], torques[0], atol=1e-6)
 
 
 def test_a_command_reports_every_task_in_order():
