@@ -17,7 +17,8 @@ from hypothesis.extra.numpy import arrays
 
 from prioritized_tracking.charts import Position, RotationVector
 from prioritized_tracking.core import arm as arms
-from prioritized_tracking.core.cycle import Controller, limit_torque
+from prioritized_tracking.core.command import limit_torque
+from prioritized_tracking.core.cycle import Controller
 from prioritized_tracking.core.references import PoseHold
 from prioritized_tracking.core.start import StartLimits
 from prioritized_tracking.errors import InputError
