@@ -176,7 +176,8 @@ class Prioritized(Law):
         room, outcome = here.room, self.outcome
         count, self.pruned = reference_velocity(self.layout, self._gains, room, room, self._branches, False)
         blend(self._branches, count, outcome.report, outcome.D, outcome.push)
-        outcome.D[np.diag_indices_from(outcome.D)] += self._floor
+        if self._floor > 0.0:
+            outcome.D[np.diag_indices_from(outcome.D)] += self._floor
         self._take(here, count)
 
     def _take(self, here: Evaluation, count: int) -> None:
