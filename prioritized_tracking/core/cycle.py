@@ -220,6 +220,7 @@ class Controller:
         here, law : arrays that the next call overwrites.
 
         """
+        q, _ = self._state(q, np.zeros(self.arm.n))
         here = self._here
         inertia(self.arm, here.data, q)
         here.update(q, self._references.at_path_time(t, self._holder(q)))

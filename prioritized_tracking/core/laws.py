@@ -111,7 +111,12 @@ class Law:
             The state has no solution.
 
         """
-        raise NotImplementedError(f"law {self.name} has no shares")
+        raise InputError(
+            Problem(
+                what=f"law '{self.name}' has no shares",
+                remedy="Evaluate it with torque, or take prioritized.",
+            )
+        )
 
     def prepare(self, here: Evaluation, nominal: Evaluation | None = None) -> None:
         """
