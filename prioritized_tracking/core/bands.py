@@ -47,6 +47,9 @@ def spread_configurations(arm: Arm, count: int = SAMPLES) -> Array:
     lower = np.where(np.isfinite(arm.lower), arm.lower, -UNLIMITED)
     upper = np.where(np.isfinite(arm.upper), arm.upper, UNLIMITED)
     points = qmc.Sobol(d=arm.n, scramble=False).random(count)
+    if len(np.unique(points[:, 0])) < count or len(np.unique(points[:, -1])) < count:
+        # Ctrl-C while SciPy reads its direction numbers is swallowed there, and the points coincide
+        raise KeyboardInterrupt
     positions: Array = lower + points * (upper - lower)
     return positions
 
