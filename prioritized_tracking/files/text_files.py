@@ -135,7 +135,7 @@ def write_text(path: str | os.PathLike[str], text: str) -> None:
     Parameters
     ----------
     path : path
-        The file; replaced when it exists.
+        The file; replaced when it exists. A device or a pipe is refused: moving a file there would remove it.
     text : str
         Its content.
 
@@ -148,11 +148,16 @@ def write_text(path: str | os.PathLike[str], text: str) -> None:
     target = Path(path)
     temporary = target.with_name(f".{target.name}.part")
     try:
+        if target.exists() and not target.is_file():
+            kind = "a folder" if target.is_dir() else "a device or a pipe"
+            raise InputError(Problem(what="the file cannot be written", where=str(target), got=kind))
         try:
             temporary.write_text(text, encoding="utf-8", newline="")
             temporary.replace(target)
         except BaseException:
             temporary.unlink(missing_ok=True)
             raise
+    except InputError:
+        raise
     except (OSError, ValueError) as error:
         raise InputError(unusable("the file cannot be written", str(target), error)) from None

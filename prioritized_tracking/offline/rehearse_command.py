@@ -66,7 +66,7 @@ def run(
     first = next(iter(controllers.values()))
     seconds = default_seconds(first) if seconds is None else seconds
     settle = settling_time(seconds) if settle is None else settle
-    if problems := _window_problems(seconds, settle):
+    if problems := _window_problems(seconds, settle, 1.0 / first.rate):
         raise InputError(problems)
     _prepare(folder, first.stack_file.text)
     notes = notes_of(first)
@@ -114,7 +114,7 @@ def notes_of(controller: Any) -> list[str]:
     """
     paths = {name: channel.path for name, channel in controller.channels.items() if channel.path is not None}
     messages = [f"reference {name}: {text}" for name, path in paths.items() for text in path.messages]
-    return [*controller.stack_file.warnings, *controller.notes, *messages]
+    return list(dict.fromkeys((*controller.stack_file.warnings, *controller.notes, *messages)))
 
 
 def _load(stack: str, laws: Sequence[str], changes: dict[str, Any]) -> dict[str, Any]:
@@ -248,8 +248,12 @@ def _law_problems(laws: Sequence[str], known: Sequence[str]) -> list[Problem]:
     ]
 
 
-def _window_problems(seconds: float | None, settle: float | None) -> list[Problem]:
-    if seconds is None or settle is None or settle < seconds:
+def _window_problems(seconds: float | None, settle: float | None, period: float = 0.0) -> list[Problem]:
+    """
+    Return what is wrong with the time to measure: not a cycle of `period`, s, would be left.
+
+    """
+    if seconds is None or settle is None or (settle < seconds and settle <= max(seconds - period, 0.0)):
         return []
     return [
         Problem(
