@@ -15,7 +15,8 @@ from prioritized_tracking.errors import InputError, Problem
 
 if TYPE_CHECKING:
     from prioritized_tracking.assembly import load
-    from prioritized_tracking.core.cycle import Command, Controller, TaskReport
+    from prioritized_tracking.core.command import Command, TaskReport
+    from prioritized_tracking.core.cycle import Controller
 
 __version__ = "0.1.0"
 
@@ -24,8 +25,8 @@ __all__ = ["Command", "Controller", "InputError", "Problem", "TaskReport", "__ve
 _LAZY = {
     "load": "assembly",
     "Controller": "core.cycle",
-    "Command": "core.cycle",
-    "TaskReport": "core.cycle",
+    "Command": "core.command",
+    "TaskReport": "core.command",
 }
 
 

@@ -49,7 +49,7 @@ class Outcome:
     feedback: np.ndarray  # matrix in τ = −feedback · s
     push: np.ndarray
     shares: np.ndarray
-    leaves: list = field(default_factory=list)
+    leaves: list = field(default_factory=list)  # of each branch: weight, shares, largest 1/λ owned
 
 
 def blended(M, tasks, posture=None, posture_damping=0.0, claim_speed=None):
@@ -66,7 +66,7 @@ def blended(M, tasks, posture=None, posture_damping=0.0, claim_speed=None):
         rho = np.sum((np.abs(difference) / claim_speed) ** 8.0) ** 0.125
         return g_0 + difference * (saturation(rho) / rho if rho > 0 else 1.0)
 
-    def visit(i, weight, N, velocity, feedback, push, shares):
+    def visit(i, weight, N, velocity, feedback, push, shares, apparent):
         if i == len(tasks):
             if posture:
                 left = n - sum(shares)
@@ -77,11 +77,12 @@ def blended(M, tasks, posture=None, posture_damping=0.0, claim_speed=None):
                 shares = [*shares, left]
             else:
                 shares = [*shares, 0]
+            apparent = [*apparent, 1.0 if shares[-1] else np.inf]
             total.velocity += weight * velocity
             total.feedback += weight * feedback
             total.push += weight * push
             total.shares += weight * np.array(shares)
-            total.leaves.append((weight, tuple(shares)))
+            total.leaves.append((weight, tuple(shares), tuple(apparent)))
             return
         task = tasks[i]
         JN = task.J @ N
@@ -115,9 +116,10 @@ def blended(M, tasks, posture=None, posture_damping=0.0, claim_speed=None):
                 feedback + P.T @ np.diag(task.damping) @ P + weak,
                 push + JN.T @ own @ own.T @ force,
                 [*shares, j],
+                [*apparent, 1 / lam[j - 1] if j else np.inf],
             )
 
-    visit(0, 1.0, np.eye(n), np.zeros(n), np.zeros((n, n)), np.zeros(n), [])
+    visit(0, 1.0, np.eye(n), np.zeros(n), np.zeros((n, n)), np.zeros(n), [], [])
     return total
 
 

@@ -24,30 +24,32 @@ class ChartWork:
     """
     Arrays in which one task is evaluated, allocated once.
 
-    Parameters
-    ----------
-    m, k : number of coordinates; 6 for a pose, n for joints.
-    vectors : (4, m) view to use for x, x_d, error and x_dot_d; None: fresh arrays.
-    rows : (m, k) view to use; None: a fresh array.
-
     Attributes
     ----------
     x, x_d : (m,) coordinates at the measured and at the reference pose, m or rad.
-    error : (m,) x̃, the wrapped difference.
-    x_dot_d : (m,) velocity ẋ_d of the reference coordinates.
-    rows, rows_d : (m, k) with rows · V = rate · ẋ.
+    x_dot_d : (m,) velocity of the reference coordinates, where the chart gives it itself.
+    rows, rows_d : (m, k) with rows · V = rate · ẋ; k is 6 (pose) or n (joints).
     rate, rate_d : (m, m).
-    validity : float in [0, 1], the product c of both validities.
 
     """
 
-    __slots__ = ("error", "rate", "rate_d", "rows", "rows_d", "validity", "x", "x_d", "x_dot_d")
+    __slots__ = ("rate", "rate_d", "rows", "rows_d", "x", "x_d", "x_dot_d")
 
-    def __init__(self, m: int, k: int, vectors: Array | None = None, rows: Array | None = None) -> None:
-        self.x, self.x_d, self.error, self.x_dot_d = vectors if vectors is not None else np.zeros((4, m))
-        self.rows, self.rows_d = np.zeros((m, k)) if rows is None else rows, np.zeros((m, k))
-        self.rate, self.rate_d = np.eye(m), np.eye(m)
-        self.validity = 0.0
+    def __init__(
+        self, x: Array, x_d: Array, x_dot_d: Array, rows: Array, rows_d: Array, rate: Array, rate_d: Array
+    ) -> None:
+        self.x, self.x_d, self.x_dot_d = x, x_d, x_dot_d
+        self.rows, self.rows_d, self.rate, self.rate_d = rows, rows_d, rate, rate_d
+
+    @classmethod
+    def allocate(cls, m: int, k: int) -> ChartWork:
+        """
+        Fresh arrays for m coordinates.
+
+        """
+        rows, rows_d = np.zeros((2, m, k))
+        x, x_d, x_dot_d = np.zeros((3, m))
+        return cls(x, x_d, x_dot_d, rows, rows_d, np.eye(m), np.eye(m))
 
 
 class Chart:
@@ -111,35 +113,25 @@ class Chart:
             if angular:
                 out[i] = wrap(out[i])
 
-    def track(self, R: Array, p: Array, R_d: Array, p_d: Array, V_d: Array, work: ChartWork) -> None:
+    def track(self, R: Array, p: Array, R_d: Array, p_d: Array, V_d: Array, work: ChartWork) -> float:
         """
-        Evaluate the chart at the measured and the reference pose and fill ``work``.
-
-        ẋ_d = rate_d⁻¹ rows_d V_d is solved only where the reference's validity is positive; where
-        the task has faded out, ẋ_d is left at zero and multiplied by a validity of zero.
+        Evaluate the chart at the measured and at the reference pose.
 
         Parameters
         ----------
         R, p : measured pose in the base frame.
         R_d, p_d, V_d : reference pose and its velocity (6,), m/s and rad/s, in base axes.
-        work : filled.
+        work : filled; ``x_dot_d`` only by charts with relative coordinates, which also leave
+            ``x_d`` and ``rows_d`` at zero.
+
+        Returns
+        -------
+        float
+            c, the product of both validities.
 
         """
         c = self.evaluate(R, p, work.x, work.rows, work.rate)
-        c_d = self.evaluate(R_d, p_d, work.x_d, work.rows_d, work.rate_d)
-        work.validity = c * c_d
-        self.difference(work.x, work.x_d, work.error)
-        if c_d > 0.0:
-            work.x_dot_d[:] = self.rate_solve(work.rate_d, work.rows_d @ V_d)
-        else:
-            work.x_dot_d[:] = 0.0
-
-    def rate_solve(self, rate: Array, y: Array) -> Array:
-        """
-        Solve rate · ẋ = y; charts with an identity rate need not.
-
-        """
-        return np.asarray(np.linalg.solve(rate, y), dtype=np.float64)
+        return c * self.evaluate(R_d, p_d, work.x_d, work.rows_d, work.rate_d)
 
 
 class UnitRateChart(Chart):
@@ -147,10 +139,3 @@ class UnitRateChart(Chart):
     A chart whose rate is the identity: rows · V = ẋ.
 
     """
-
-    def rate_solve(self, rate: Array, y: Array) -> Array:
-        """
-        Nothing to solve.
-
-        """
-        return y

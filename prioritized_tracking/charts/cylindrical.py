@@ -14,6 +14,7 @@ import numpy as np
 
 from prioritized_tracking.charts.base import Chart
 from prioritized_tracking.charts.surface import POINT, finite_point, radial, unit_vector
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.core.smooth import fade
 from prioritized_tracking.schema import Parameter
@@ -50,6 +51,7 @@ def azimuth_axes(axis: Array) -> tuple[Array, Array]:
     return zero, np.cross(axis, zero)
 
 
+@compiled
 def cylindrical(
     p: Array, through: Array, frame: Array, span: tuple[float, float], x: Array, rows: Array, rate: Array
 ) -> float:
@@ -114,10 +116,3 @@ class Cylindrical(Chart):
 
         """
         return cylindrical(p, self._point, self._frame, self._span, x, rows, rate)
-
-    def rate_solve(self, rate: Array, y: Array) -> Array:
-        """
-        Divide by diag(1, r, 1).
-
-        """
-        return y / np.diagonal(rate)

@@ -7,21 +7,26 @@ Cartesian position: chosen axes of the frame's origin.
 
 from __future__ import annotations
 
+import numpy as np
+from numpy.typing import NDArray
+
 from prioritized_tracking.charts.base import UnitRateChart
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.schema import Parameter
 
 AXES = ("x", "y", "z", "xy", "xz", "yz", "xyz")
 
 
-def position(p: Array, axes: tuple[int, ...], x: Array, rows: Array) -> float:
+@compiled
+def position(p: Array, axes: NDArray[np.int64], x: Array, rows: Array) -> float:
     """
     Selected coordinates of p; never fails.
 
     """
-    for i, axis in enumerate(axes):
-        x[i] = p[axis]
-        rows[i, axis] = 1.0
+    for i in range(axes.shape[0]):
+        x[i] = p[axes[i]]
+        rows[i, axes[i]] = 1.0
     return 1.0
 
 
@@ -47,7 +52,7 @@ class Position(UnitRateChart):
             raise ValueError(f"axes: expected one of {', '.join(AXES)}, got {axes!r}")
         self.coordinates = tuple(axes)
         self.angular = (False,) * len(axes)
-        self._axes = tuple("xyz".index(a) for a in axes)
+        self._axes = np.array(["xyz".index(a) for a in axes])
 
     def evaluate(self, R: Array, p: Array, x: Array, rows: Array, rate: Array) -> float:
         """

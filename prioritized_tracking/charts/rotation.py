@@ -10,9 +10,8 @@ from __future__ import annotations
 import math
 from typing import Any, TypeAlias
 
-import numpy as np
-
 from prioritized_tracking.charts.base import Chart, ChartWork, UnitRateChart
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array, rotation_log
 from prioritized_tracking.core.smooth import fade
 from prioritized_tracking.schema import Parameter
@@ -42,18 +41,12 @@ class RotationVector(UnitRateChart):
     def __init__(self) -> None:
         pass
 
-    def track(self, R: Array, p: Array, R_d: Array, p_d: Array, V_d: Array, work: ChartWork) -> None:
+    def track(self, R: Array, p: Array, R_d: Array, p_d: Array, V_d: Array, work: ChartWork) -> float:
         """
         See :meth:`Chart.track`.
 
         """
-        E = R @ R_d.T
-        angle = rotation_log(E, work.x)
-        work.error[:] = work.x
-        np.dot(E, V_d[3:], out=work.x_dot_d)
-        for i in range(3):
-            work.rows[i, 3 + i] = 1.0
-        work.validity = fade(angle, _FADE_ZERO, _FADE_ONE)
+        return rotation_vector(R, R_d, V_d[3:], work.x, work.x_dot_d, work.rows)
 
 
 def euler_indices(sequence: str) -> tuple[int, int, int, int, float]:
@@ -70,6 +63,21 @@ def euler_indices(sequence: str) -> tuple[int, int, int, int, float]:
 EulerAxes: TypeAlias = tuple[int, int, int, int, float]
 
 
+@compiled
+def rotation_vector(R: Array, R_d: Array, omega_d: Array, x: Array, x_dot_d: Array, rows: Array) -> float:
+    """
+    x̃ = log(R R_dᵀ), rows on ω, and the reference's angular velocity turned by the error.
+
+    """
+    E = R @ R_d.T
+    angle = rotation_log(E, x)
+    for i in range(3):
+        x_dot_d[i] = E[i, 0] * omega_d[0] + E[i, 1] * omega_d[1] + E[i, 2] * omega_d[2]
+        rows[i, 3 + i] = 1.0
+    return fade(angle, _FADE_ZERO, _FADE_ONE)
+
+
+@compiled
 def euler(R: Array, axes: EulerAxes, span: tuple[float, float], x: Array, rows: Array, rate: Array) -> float:
     """
     Intrinsic Euler angles R = R_i(φ) R_j(β) R_k(γ), with ω = E (φ̇, β̇, γ̇) in base axes.
@@ -144,12 +152,3 @@ class Euler(Chart):
 
         """
         return euler(R, self._axes, self._span, x, rows, rate)
-
-    def rate_solve(self, rate: Array, y: Array) -> Array:
-        """
-        Solve EᵀE ẋ = y in closed form; only the first and last angle are coupled.
-
-        """
-        s = rate[0, 2]
-        determinant = 1.0 - s * s
-        return np.array([(y[0] - s * y[2]) / determinant, y[1], (y[2] - s * y[0]) / determinant])

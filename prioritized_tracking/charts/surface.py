@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 
 from prioritized_tracking.charts.base import UnitRateChart
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.core.smooth import fade
 from prioritized_tracking.schema import Parameter
@@ -55,6 +56,7 @@ POINT = Parameter(
 )
 
 
+@compiled
 def plane(p: Array, through: Array, normal: Array, x: Array, rows: Array) -> float:
     """
     Signed distance to a plane, positive on the side of the normal; never fails.
@@ -68,6 +70,7 @@ def plane(p: Array, through: Array, normal: Array, x: Array, rows: Array) -> flo
     return 1.0
 
 
+@compiled
 def radial(p: Array, through: Array, axis: Array, out: Array) -> float:
     """
     Unit vector away from an axis and the distance to it; on the axis any vector across it.
@@ -96,6 +99,7 @@ def radial(p: Array, through: Array, axis: Array, out: Array) -> float:
     return distance
 
 
+@compiled
 def cylinder(p: Array, through: Array, axis: Array, radius: float, x: Array, rows: Array) -> float:
     """
     Signed distance to a cylinder, positive outside; fails on its axis.

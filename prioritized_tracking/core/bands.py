@@ -43,11 +43,16 @@ def spread_configurations(arm: Arm, count: int = SAMPLES) -> Array:
     """
     Joint positions (count, n), rad: the first points of an unscrambled Sobol sequence inside the limits.
 
+    The axes of the sequence go with the joints as the model numbers them, root to tip: in whatever order
+    commands come, a band is the same.
+
     """
     lower = np.where(np.isfinite(arm.lower), arm.lower, -UNLIMITED)
     upper = np.where(np.isfinite(arm.upper), arm.upper, UNLIMITED)
-    points = qmc.Sobol(d=arm.n, scramble=False).random(count)
-    if len(np.unique(points[:, 0])) < count or len(np.unique(points[:, -1])) < count:
+    order = slice(None) if arm.built.order is None else arm.built.order
+    points = np.empty((count, arm.n))
+    points[:, order] = qmc.Sobol(d=arm.n, scramble=False).random(count)
+    if any(len(np.unique(column)) < count for column in points.T):
         # Ctrl-C while SciPy reads its direction numbers is swallowed there, and the points coincide
         raise KeyboardInterrupt
     positions: Array = lower + points * (upper - lower)
@@ -70,7 +75,7 @@ def whitened_rows(arm: Arm, charts: Sequence[PlacedChart]) -> list[Array]:
                 rows = np.eye(arm.n)[list(chart.indices)]
             else:
                 frame_motion(arm, data, arm.frame_id(frame), arm.frame_id(base), R, p, J)
-                work = ChartWork(len(chart.coordinates), 6)
+                work = ChartWork.allocate(len(chart.coordinates), 6)
                 chart.track(R, p, R, p, V, work)
                 rows = work.rows @ J
             jacobians.append(rows @ whiten)

@@ -15,6 +15,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 
 #: At most this many branches are carried from one task to the next.
@@ -42,28 +43,6 @@ class Gains(NamedTuple):
     has_posture: bool
     posture_damping: float
     claim_speed: Array
-
-
-class Claims(NamedTuple):
-    """
-    What the tasks want in one state.
-
-    L, L_inverse : (n, n) Cholesky factor of the inertia matrix M = L Lᵀ, and its inverse.
-    J : (m, n) task Jacobians c · rows · J_frame.
-    nu : (m,) task reference velocities ν_r, m/s or rad/s.
-    validity : (r,) c of each chart task.
-    posture : (n,) reference velocity of the posture task, q̇_d − k_p x̃, rad/s.
-    posture_feed_forward : (n,) its q̇_d alone, rad/s.
-
-    """
-
-    L: Array
-    L_inverse: Array
-    J: Array
-    nu: Array
-    validity: Array
-    posture: Array
-    posture_feed_forward: Array
 
 
 class Branches(NamedTuple):
@@ -106,9 +85,15 @@ def allocate_branches(n: int, r: int, most_rows: int) -> Branches:
     )
 
 
-def root(branches: Branches, n: int) -> None:
+@compiled
+def root(branches: Branches, n: int) -> int:
     """
     The one branch before the first task: nothing owned, N_1 = I.
+
+    Returns
+    -------
+    int
+        1, the number of branches.
 
     """
     branches.weight[0] = 1.0
@@ -120,8 +105,10 @@ def root(branches: Branches, n: int) -> None:
     branches.u[0] = 0.0
     branches.feedback[0] = 0.0
     branches.push[0] = 0.0
+    return int(branches.weight[0])  # not a literal, which would compile every caller twice
 
 
+@compiled
 def copy_branch(branches: Branches, a: int, b: int, weight: float) -> None:
     """
     Copy branch a to place b, with a new weight.
@@ -136,6 +123,7 @@ def copy_branch(branches: Branches, a: int, b: int, weight: float) -> None:
     branches.push[b] = branches.push[a]
 
 
+@compiled
 def prune(branches: Branches, count: int) -> int:
     """
     Keep at most ``MOST_BRANCHES``: subtract the next weight from all, drop what is not positive.
@@ -148,8 +136,12 @@ def prune(branches: Branches, count: int) -> int:
         How many are left; their weights sum to 1 again.
 
     """
-    threshold = np.sort(branches.weight[:count])[count - 1 - MOST_BRANCHES]
-    tie = branches.weight[:count].max() <= threshold
+    weights = branches.weight[:count].copy()
+    threshold = 0.0  # the largest weight that at least MOST_BRANCHES others reach
+    for b in range(count):
+        if weights[b] > threshold and (weights >= weights[b]).sum() > MOST_BRANCHES:
+            threshold = weights[b]
+    tie = weights.max() <= threshold
     kept = 0
     for b in range(count):
         weight = branches.weight[b] if tie else branches.weight[b] - threshold
@@ -160,6 +152,7 @@ def prune(branches: Branches, count: int) -> int:
     return kept
 
 
+@compiled
 def blend(branches: Branches, count: int, report: Array, D: Array, push: Array) -> None:
     """
     Weighted sums over branches: shares, feedback and push.

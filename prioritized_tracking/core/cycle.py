@@ -11,92 +11,21 @@ an argument.
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
 from prioritized_tracking.core.arm import Arm, ArmData, dynamics, frame_motion, inertia
 from prioritized_tracking.core.channels import Channel, References, Samples
-from prioritized_tracking.core.laws import LAWS, TWIN_STEP, Law, Torque
+from prioritized_tracking.core.claims import Room
+from prioritized_tracking.core.command import HUGE, Command, limit_torque, usable
+from prioritized_tracking.core.kernel import TWIN_STEP, Outcome
+from prioritized_tracking.core.laws import LAWS, Law
 from prioritized_tracking.core.references import JointHold, PoseHold
 from prioritized_tracking.core.rotation import Array, rotation_log
 from prioritized_tracking.core.stack import Evaluation, Stack
 from prioritized_tracking.core.start import StartLimits, joint_problems, state_problems, tool_problems
 from prioritized_tracking.errors import InputError, Problem
-
-
-@dataclass(slots=True, eq=False)
-class TaskReport:
-    """
-    One task in one cycle.
-
-    Attributes
-    ----------
-    error : (m,) x̃, m or rad.
-    share : directions owned, 0 … m; NaN for laws without shares.
-    apparent_inertia : largest 1/λ over the owned directions of the heaviest branch, kg or kg·m²;
-        inf if it owns none.
-    validity : c, 0 … 1.
-
-    """
-
-    error: Array
-    share: float
-    apparent_inertia: float
-    validity: float
-
-
-@dataclass(slots=True, eq=False)
-class Command:
-    """
-    Outcome of one cycle.
-
-    Attributes
-    ----------
-    torque : (n,) to be sent, N·m (without gravity if the driver adds it).
-    joint_velocity_reference : (n,) q̇_r, rad/s.
-    tasks : a `TaskReport` for each task, in order of priority.
-    share_sum : sum of the shares; n for a complete stack.
-    branches : number of exact hierarchies blended.
-    pruned : more of them were met than can be followed.
-    limited : the torque limit cut the feedback, or more.
-    events : what the guard did.
-
-    """
-
-    torque: Array
-    joint_velocity_reference: Array
-    tasks: dict[str, TaskReport]
-    share_sum: float
-    branches: int = 1
-    pruned: bool = False
-    limited: bool = False
-    events: tuple[str, ...] = field(default=())
-
-
-def limit_torque(feed_forward: Array, feedback: Array, limit: Array) -> tuple[Array, bool]:
-    """
-    Scale the feedback until the torque fits; only if the feed-forward alone does not, clip it.
-
-    Parameters
-    ----------
-    feed_forward, feedback, limit : (n,) N·m; limits positive.
-
-    Returns
-    -------
-    torque : (n,) N·m, within the limits.
-    limited : whether anything was cut.
-
-    """
-    total = feed_forward + feedback
-    if np.all(np.abs(total) <= limit):
-        return total, False
-    base = np.clip(feed_forward, -limit, limit)
-    room = np.where(feedback > 0.0, limit - base, limit + base)
-    needed = np.abs(feedback)
-    scale = np.min(np.divide(room, needed, out=np.ones_like(room), where=needed > room))
-    return np.clip(base + scale * feedback, -limit, limit), True
 
 
 class Controller:
@@ -116,6 +45,7 @@ class Controller:
     ----------
     joints : names in command order.
     tools : for each controlled frame (frame, base, channel) numbers and name.
+    described : for each controlled frame the units of its tasks, "m" and "rad": what of its pose counts.
     stack_file : the file it was built from; None: built by hand.
     notes : what the user should be told about it.
 
@@ -139,16 +69,30 @@ class Controller:
         self.stack_file: Any = None
         self.notes: tuple[str, ...] = ()
         self.law: Law = LAWS[law](arm, stack)
+        self._torque_limit = np.array(arm.torque_limit)
         self.tools = {
             task.frame: (arm.frame_id(task.frame), arm.frame_id(task.base), task.reference)
             for task in reversed(stack.tasks)
             if task.chart.kind == "pose"
         }
+        self.described = {
+            frame: frozenset(task.unit for task in stack.tasks if task.frame == frame) for frame in self.tools
+        }
         self.names = tuple(t.name for t in stack.tasks) + ((stack.posture.name,) if stack.posture else ())
+        ends = (*stack.first_row, stack.first_row[-1] + arm.n)
+        self._blocks = tuple((name, slice(*ends[i : i + 2])) for i, name in enumerate(self.names))
         self._here, self._there = Evaluation(arm, stack), Evaluation(arm, stack)
         self._data: ArmData = arm.data()
         self._references = References(channels)
         self._samples: Samples = {}
+
+    @property
+    def room(self) -> Room:
+        """
+        Arrays of the last evaluation; the next one overwrites them.
+
+        """
+        return self._here.room
 
     @property
     def duration(self) -> float:
@@ -182,10 +126,10 @@ class Controller:
         self._samples = references.at(t)
         starts = {name: self._samples[name].q for name, c in self.channels.items() if c.kind == "joints"}
         problems = state_problems(self.arm, q, v)
-        problems += tool_problems(self.pose_errors(q), self.start_limits)
+        problems += tool_problems(self.pose_errors(q), self.described, self.start_limits)
         problems += joint_problems(self.arm, q, starts, self.start_limits)
         if problems:
-            references.active = False
+            references.deactivate()
             raise InputError(problems)
         if any(channel.at_activation for channel in self.channels.values()):
             references.start(t, only_at_activation=True)
@@ -239,10 +183,9 @@ class Controller:
         q, v = self._state(q, v)
         references = self._references
         self._samples = references.at(t)
-        there = references.at(t + TWIN_STEP)
-        outcome = self._law(q, v, self._samples, there, references.push_scale(t))
-        torque, limited = limit_torque(outcome.feed_forward, outcome.feedback, self.arm.torque_limit)
-        return self._command(torque, outcome, limited)
+        outcome = self._law(q, v, self._samples, references.push_scale(t))
+        torque, limited = limit_torque(outcome.feed_forward, outcome.feedback, self._torque_limit)
+        return self._command(torque, limited)
 
     def evaluate(self, t: float, q: Array, v: Array) -> Command:
         """
@@ -261,12 +204,42 @@ class Controller:
 
         """
         q, v = self._state(q, v)
-        holder = self._holder(q)
-        here, there = (self._references.at_path_time(s, holder) for s in (t, t + TWIN_STEP))
-        outcome = self._law(q, v, here, there, 1.0)
-        return self._command(outcome.feed_forward + outcome.feedback, outcome, False)
+        outcome = self._law(q, v, self._references.at_path_time(t, self._holder(q)), 1.0)
+        return self._command(outcome.feed_forward + outcome.feedback, False)
 
-    def _law(self, q: Array, v: Array, samples: Samples, samples_there: Samples, push_scale: float) -> Torque:
+    def survey(self, t: float, q: Array) -> tuple[Evaluation, Law]:
+        """
+        Shares, feedback and reference velocity at any joint positions and path time, without torque.
+
+        Parameters
+        ----------
+        t, q : as for ``evaluate``.
+
+        Returns
+        -------
+        here, law : arrays that the next call overwrites.
+
+        """
+        here = self._here
+        inertia(self.arm, here.data, q)
+        here.update(q, self._references.at_path_time(t, self._holder(q)))
+        self.law.survey(here)
+        return here, self.law
+
+    def rehearse_one_cycle(self) -> None:
+        """
+        Go through everything a cycle needs, at the start of the references, without sending anything.
+
+        """
+        q, _ = self._state(self.start_configuration(), np.zeros(self.arm.n))
+        self._samples = self._references.at_path_time(0.0, self._holder(q))
+        outcome = self._law(q, np.zeros_like(q), self._samples, 1.0)
+        self._command(limit_torque(outcome.feed_forward, outcome.feedback, self._torque_limit)[0], False)
+        self.pose_errors(q)
+        if self.law.has_shares:
+            self.survey(0.0, q)
+
+    def _law(self, q: Array, v: Array, samples: Samples, push_scale: float) -> Outcome:
         """
         Evaluate the stack at the state and, for tracking laws, at its twin; then the law.
 
@@ -277,29 +250,30 @@ class Controller:
         if self.law.tracks:
             twin = q + TWIN_STEP * v
             inertia(self.arm, there.data, twin)
-            there.update(twin, samples_there, here)
-        return self.law.torque(here, samples, there, samples_there, v, push_scale)
+            there.follow(here, twin, TWIN_STEP)
+        self.law.torque(here, there, v, push_scale)
+        return self.law.outcome
 
-    def _command(self, torque: Array, outcome: Torque, limited: bool) -> Command:
+    def _command(self, torque: Array, limited: bool) -> Command:
         """
         Put torque and telemetry together.
 
         """
         here, law = self._here, self.law
-        share, apparent = law.report.tolist()
-        validity = here.claims.validity.tolist()
-        tasks = {
-            task.name: TaskReport(work.error.copy(), share[i], apparent[i], validity[i])
-            for i, (task, work) in enumerate(zip(self.stack.tasks, here.charts, strict=True))
-        }
-        if self.stack.posture:
-            tasks[self.stack.posture.name] = TaskReport(
-                here.posture_error.copy(), share[-1], apparent[-1], 1.0
-            )
         if self.gravity_by_driver:
             torque = torque - here.data.g
+        room = here.room
         return Command(
-            torque, outcome.velocity_reference, tasks, sum(share), law.branches, law.pruned, limited
+            torque,
+            law.velocity.copy(),
+            law.branches,
+            law.pruned,
+            limited,
+            (),
+            self._blocks,
+            np.concatenate((room.error, room.posture_error)),
+            law.outcome.report.copy(),
+            room.claims.validity.copy(),
         )
 
     # ------------------------------------------------------------ references
@@ -361,20 +335,23 @@ class Controller:
         The measured state as finite arrays of the right length.
 
         """
-        arrays = []
-        for name, unit, value in (("positions", "rad", q), ("velocities", "rad/s", v)):
-            array = np.ascontiguousarray(value, dtype=np.float64)
-            if array.shape != (self.arm.n,) or not np.isfinite(array).all():
-                raise InputError(
+        q, v = np.ascontiguousarray(q, dtype=np.float64), np.ascontiguousarray(v, dtype=np.float64)
+        shape = (self.arm.n,)
+        if q.shape != shape or v.shape != shape or not (usable(q) and usable(v)):
+            raise InputError(
+                [
                     Problem(
                         what=f"joint {name} cannot be used",
-                        expected=f"{self.arm.n} finite numbers ({unit}) for {', '.join(self.joints)}",
+                        expected=f"{self.arm.n} numbers ({unit}), finite and below {HUGE:g}: "
+                        + ", ".join(self.joints),
                         got=f"shape {array.shape}, {np.array2string(array, threshold=14)}",
                         remedy="Check the joint state's names and lengths.",
                     )
-                )
-            arrays.append(array)
-        return arrays[0], arrays[1]
+                    for name, unit, array in (("positions", "rad", q), ("velocities", "rad/s", v))
+                    if array.shape != shape or not usable(array)
+                ]
+            )
+        return q, v
 
     def _require_active(self) -> None:
         """

@@ -18,21 +18,23 @@ import math
 
 import numpy as np
 
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.branches import (
     MOST_BRANCHES,
     Branches,
-    Claims,
     Gains,
     copy_branch,
     prune,
     root,
 )
+from prioritized_tracking.core.claims import Claims
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.core.smooth import saturation, smoothstep
 
 _LN4 = math.log(4.0)
 
 
+@compiled
 def hierarchy(gains: Gains, claims: Claims, branches: Branches, with_feedback: bool) -> tuple[int, bool]:
     """
     Follow the priority list from the first task to the posture.
@@ -51,8 +53,7 @@ def hierarchy(gains: Gains, claims: Claims, branches: Branches, with_feedback: b
     """
     J_hat = claims.J @ claims.L_inverse.T
     feed_forward = claims.posture_feed_forward @ claims.L
-    root(branches, claims.L.shape[0])
-    count = 1
+    count = root(branches, claims.L.shape[0])
     pruned = False
     for i in range(claims.validity.shape[0]):
         rows = J_hat[gains.first_row[i] : gains.first_row[i + 1]]
@@ -67,6 +68,7 @@ def hierarchy(gains: Gains, claims: Claims, branches: Branches, with_feedback: b
     return count, pruned
 
 
+@compiled
 def visit(
     i: int,
     b: int,
@@ -106,6 +108,7 @@ def visit(
     return split(i, b, count, gains, claims, A, gram, residual, feed_forward, branches, with_feedback)
 
 
+@compiled
 def small_inverse(G: Array, out: Array) -> float:
     """
     Inverse of a symmetric matrix of up to three rows by its cofactors, and its Frobenius norm.
@@ -122,23 +125,51 @@ def small_inverse(G: Array, out: Array) -> float:
         return float(out[0, 0])
     if k > 3:
         return np.inf
-    a, b, d = G[0, 0], G[0, 1], G[1, 1]
+    a, b, d, f = G[0, 0], G[0, 1], G[1, 1], G[k - 1, k - 1]
     if k == 2:
         determinant = a * d - b * b
         out[0, 0], out[0, 1], out[1, 0], out[1, 1] = d, -b, -b, a
     else:
-        c, e, f = G[0, 2], G[1, 2], G[2, 2]
+        c, e = G[0, 2], G[1, 2]
         p, q, r = d * f - e * e, c * e - b * f, b * e - c * d
         determinant = a * p + b * q + c * r
         out[0, 0], out[0, 1], out[0, 2] = p, q, r
         out[1, 0], out[1, 1], out[1, 2] = q, a * f - c * c, b * c - a * e
         out[2, 0], out[2, 1], out[2, 2] = r, b * c - a * e, a * d - b * b
-    if not determinant > 1e-12 * a * d:  # beyond this the cofactors cancel
+    size = a + d + (f if k == 3 else 0.0)
+    if not determinant > 1e-7 * size**k:  # cofactors cancel: the error is some 1e-16 size**k/determinant
         return np.inf
     out /= determinant
     return math.sqrt((out * out).sum())
 
 
+@compiled
+def largest_eigenvalue(G: Array) -> float:
+    """
+    Largest eigenvalue of a symmetric matrix of up to three rows, in closed form.
+
+    With q the mean eigenvalue and p² the mean square of the deviations over 2, the eigenvalues are
+    q + 2 p cos((φ + 2 π k)/3), cos φ = det((G − q I)/p)/2 (Smith 1961). Exact to about 1e-8 where
+    two of them meet.
+
+    """
+    k = G.shape[0]
+    if k == 1:
+        return float(G[0, 0])
+    a, b, d = G[0, 0], G[0, 1], G[1, 1]
+    if k == 2:
+        return float(0.5 * (a + d) + math.sqrt(0.25 * (a - d) * (a - d) + b * b))
+    c, e, f = G[0, 2], G[1, 2], G[2, 2]
+    q = (a + d + f) / 3.0
+    a, d, f = a - q, d - q, f - q
+    p = math.sqrt((a * a + d * d + f * f + 2.0 * (b * b + c * c + e * e)) / 6.0)
+    if p <= 1e-150:
+        return float(q)
+    half = 0.5 * (a * (d * f - e * e) - b * (b * f - c * e) + c * (b * e - c * d)) / p / p / p
+    return float(q + 2.0 * p * math.cos(math.acos(min(1.0, max(-1.0, half))) / 3.0))
+
+
+@compiled
 def own_all(
     i: int,
     b: int,
@@ -163,12 +194,13 @@ def own_all(
     branches.u[b] += residual @ pseudo
     branches.N[b] -= A.T @ pseudo
     if with_feedback:
-        branches.apparent[b, i] = inverse[0, 0] if last - first == 1 else np.linalg.eigvalsh(inverse)[-1]
+        branches.apparent[b, i] = largest_eigenvalue(inverse)
         K = gains.damping[first:last] / claims.validity[i] ** 2
         branches.feedback[b] += (A.T * K) @ A
         branches.push[b] += gains.force[first:last] @ A
 
 
+@compiled
 def split(
     i: int,
     b: int,
@@ -215,17 +247,19 @@ def split(
     return count
 
 
+@compiled
 def principal(gram: Array) -> tuple[Array, Array]:
     """
     Eigenvalues of a small symmetric matrix from high to low, and its eigenvectors as columns.
 
     """
     if gram.shape[0] == 1:
-        return gram[0], np.ones((1, 1))
+        return gram[0].copy(), np.ones((1, 1))
     lam, U = np.linalg.eigh(gram)
-    return lam[::-1], np.ascontiguousarray(U[:, ::-1])
+    return lam[::-1].copy(), np.ascontiguousarray(U[:, ::-1])
 
 
+@compiled
 def own(
     i: int,
     j: int,
@@ -268,12 +302,13 @@ def own(
         branches.u[b] += ((1.0 - h) * y) @ B + g_0 + limited(g - g_0, claims.L_inverse, gains.claim_speed)
     branches.N[b] -= B.T @ B
     if with_feedback:
-        owned = U[:, :j]
+        owned = np.ascontiguousarray(U[:, :j])
         K = (owned.T * gains.damping[first:last]) @ owned / claims.validity[i] ** 2
         branches.feedback[b] += UA[:j].T @ (K @ UA[:j]) + (B.T * (h * gains.posture_damping)) @ B
         branches.push[b] += (gains.force[first:last] @ owned) @ UA[:j]
 
 
+@compiled
 def weakness(lam: Array, low: float) -> Array:
     """
     h_k = S((ln(1/λ_k) − ln(m_lo/4))/ln 4): 0 in the normal range, 1 from the band's lower edge on.
@@ -285,6 +320,7 @@ def weakness(lam: Array, low: float) -> Array:
     return h
 
 
+@compiled
 def limited(g: Array, L_inverse: Array, claim_speed: Array) -> Array:
     """
     Saturate a whitened velocity by the joint speeds it asks for.
@@ -301,6 +337,7 @@ def limited(g: Array, L_inverse: Array, claim_speed: Array) -> Array:
     return smaller
 
 
+@compiled
 def close(b: int, gains: Gains, claims: Claims, feed_forward: Array, branches: Branches) -> None:
     """
     The posture task owns what is left in branch b: rows Lᵀ, Ĵ = I, feedback damping · N.

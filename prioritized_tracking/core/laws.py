@@ -11,50 +11,54 @@ inverse and with the damped inverse of the Jacobian (Nakamura & Hanafusa 1986; W
 
 from __future__ import annotations
 
-from typing import ClassVar, NamedTuple
+from typing import Any, ClassVar
 
 import numpy as np
 
-from prioritized_tracking.core.arm import Arm, friction_torque
+from prioritized_tracking.core.arm import Arm
 from prioritized_tracking.core.branches import allocate_branches, blend
-from prioritized_tracking.core.channels import Samples
-from prioritized_tracking.core.hierarchy import hierarchy
+from prioritized_tracking.core.kernel import (
+    TWIN_STEP,
+    allocate_outcome,
+    inverse_dynamics,
+    prepare,
+    prioritized_torque,
+    reference_velocity,
+)
 from prioritized_tracking.core.rotation import Array, rotation_log
 from prioritized_tracking.core.stack import Evaluation, Stack, decay_rate
-
-#: Step of the finite-difference twin (s): q̇_r has 1e-15 relative noise, so q̈_r has about 1e-9.
-TWIN_STEP = 1e-6
+from prioritized_tracking.errors import InputError, Problem
 
 #: Damping λ of the damped inverse, in the mixed units of the Jacobian (m, rad).
 DAMPED_INVERSE = 0.05
 
 
-class Torque(NamedTuple):
+def unsolvable() -> InputError:
     """
-    Outcome of a law, before any limit.
-
-    feed_forward : (n,) what the motion needs: M q̈_r + C q̇_r + g + f(q̇_r), N·m.
-    feedback : (n,) the rest: −L D Lᵀ s and the like, N·m.
-    velocity_reference : (n,) q̇_r, rad/s.
+    What a law says when a state has no solution; compiled code itself raises nothing.
 
     """
-
-    feed_forward: Array
-    feedback: Array
-    velocity_reference: Array
+    return InputError(
+        Problem(
+            what="no torque can be computed in this state",
+            expected="a positive definite inertia matrix, and finite numbers throughout",
+            remedy="Check the joint state, the references, and the masses and rotor inertias of the arm.",
+        )
+    )
 
 
 class Law:
     """
-    A tracking law τ = M q̈_r + C q̇_r + g + f(q̇_r) + feedback, given by its q̇_r and its feedback.
+    A control law: from evaluated charts to torque.
 
     Attributes
     ----------
     name : value of the parameter ``law``.
     rehearsal_only : never to be run on hardware.
-    report : (2, r + 1) share and apparent inertia of each task, posture last; NaN where the law
-        has no shares.
-    D : (n, n) feedback in whitened coordinates, 1/s.
+    tracks : uses the twin.
+    has_shares : blends hierarchies, so that its tasks have shares.
+    outcome : filled by ``torque``; see `kernel.Outcome`.
+    velocity : (n,) q̇_r, rad/s.
     branches, pruned : how many exact hierarchies were blended, and whether there were too many.
 
     """
@@ -62,53 +66,71 @@ class Law:
     name: ClassVar[str]
     rehearsal_only: ClassVar[bool] = False
     tracks: ClassVar[bool] = True
+    has_shares: ClassVar[bool] = False
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
-        self.report = np.full((2, len(stack.tasks) + 1), np.nan)
-        self.D = np.zeros((arm.n, arm.n))
-        self.push = np.zeros(arm.n)
+        self.outcome = allocate_outcome(arm.n, len(stack.tasks))
+        self.velocity = np.zeros(arm.n)
+        self.layout = stack.layout(arm)
         self.branches, self.pruned = 1, False
 
-    def reference(self, here: Evaluation, samples: Samples, twin: bool) -> Array:
+    @property
+    def D(self) -> Array:
         """
-        Reference velocity q̇_r (n,), rad/s, in an evaluated state.
+        Feedback of the last state in whitened coordinates, (n, n), 1/s.
 
         """
-        raise NotImplementedError
+        return self.outcome.D
 
-    def feedback(self, here: Evaluation, s: Array, push_scale: float) -> Array:
+    def torque(self, here: Evaluation, there: Evaluation, v: Array, push_scale: float) -> None:
         """
-        Torque (n,), N·m, against s = q̇ − q̇_r.
-
-        """
-        raise NotImplementedError
-
-    def torque(
-        self,
-        here: Evaluation,
-        samples: Samples,
-        there: Evaluation,
-        samples_there: Samples,
-        v: Array,
-        push_scale: float,
-    ) -> Torque:
-        """
-        Torque of a tracking law.
+        Fill ``outcome`` and ``velocity``.
 
         Parameters
         ----------
-        here, samples : evaluation at the state and the references it was made with.
-        there, samples_there : the same for the twin, ``TWIN_STEP`` later.
+        here, there : evaluated charts at the state and, if the law tracks, at its twin
+            ``TWIN_STEP`` later.
         v : (n,) measured joint velocity, rad/s.
         push_scale : 0 … 1, ramp of the steady push.
 
+        Raises
+        ------
+        InputError
+            The state has no solution.
+
         """
-        velocity = self.reference(here, samples, False)
-        acceleration = (self.reference(there, samples_there, True) - velocity) / TWIN_STEP
-        data = here.data
-        feed_forward = data.M @ acceleration + data.C @ velocity + data.g
-        feed_forward += friction_torque(here.arm, velocity)
-        return Torque(feed_forward, self.feedback(here, v - velocity, push_scale), velocity)
+        raise NotImplementedError
+
+    def survey(self, here: Evaluation) -> None:
+        """
+        Fill ``velocity`` and the shares and feedback of ``outcome``, without torque and twin.
+
+        Raises
+        ------
+        InputError
+            The state has no solution.
+
+        """
+        raise NotImplementedError(f"law {self.name} has no shares")
+
+    def prepare(self, here: Evaluation, nominal: Evaluation | None = None) -> None:
+        """
+        Form the claims of an evaluation and factorise its inertia matrix.
+
+        """
+        if not prepare(self.layout, here.room, (nominal or here).room, nominal is not None):
+            raise unsolvable()
+
+    def finish(self, feed_forward: Array, feedback: Array, velocity: Array) -> None:
+        """
+        Fill the outcome of a law that computes its torque itself.
+
+        """
+        if not np.isfinite(feed_forward + feedback).all():
+            raise unsolvable()
+        self.outcome.feed_forward[:] = feed_forward
+        self.outcome.feedback[:] = feedback
+        self.velocity[:] = velocity
 
 
 class Prioritized(Law):
@@ -118,35 +140,55 @@ class Prioritized(Law):
     """
 
     name = "prioritized"
+    has_shares = True
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
         super().__init__(arm, stack)
         most_rows = max((task.m for task in stack.tasks), default=1)
         self._branches = allocate_branches(arm.n, len(stack.tasks), most_rows)
-        self._floor = stack.feedback_floor * np.eye(arm.n)
+        self._gains = stack.gains
+        self._floor = stack.feedback_floor
 
-    def reference(self, here: Evaluation, samples: Samples, twin: bool) -> Array:
+    def torque(self, here: Evaluation, there: Evaluation, v: Array, push_scale: float) -> None:
         """
-        q̇_r = L⁻ᵀ u; in the nominal evaluation also feedback, push and shares.
-
-        """
-        found = self._branches
-        count, pruned = hierarchy(here.stack.gains, here.claims, found, not twin)
-        if not twin:
-            blend(found, count, self.report, self.D, self.push)
-            self.D += self._floor
-            self.branches, self.pruned = count, pruned
-        velocity: Array = (found.weight[:count] @ found.u[:count]) @ here.claims.L_inverse
-        return velocity
-
-    def feedback(self, here: Evaluation, s: Array, push_scale: float) -> Array:
-        """
-        −L D Lᵀ s + push.
+        See :meth:`Law.torque`.
 
         """
-        L = here.claims.L
-        torque: Array = L @ (push_scale * self.push - self.D @ (s @ L))
-        return torque
+        count, self.pruned = prioritized_torque(
+            self.layout,
+            self._gains,
+            here.room,
+            there.room,
+            self._branches,
+            here.terms,
+            v,
+            push_scale,
+            self._floor,
+            self.outcome,
+        )
+        self._take(here, count)
+
+    def survey(self, here: Evaluation) -> None:
+        """
+        See :meth:`Law.survey`.
+
+        """
+        room, outcome = here.room, self.outcome
+        count, self.pruned = reference_velocity(self.layout, self._gains, room, room, self._branches, False)
+        blend(self._branches, count, outcome.report, outcome.D, outcome.push)
+        if self._floor > 0.0:
+            outcome.D[np.diag_indices_from(outcome.D)] += self._floor
+        self._take(here, count)
+
+    def _take(self, here: Evaluation, count: int) -> None:
+        """
+        Note the number of branches; 0 means that the state has no solution.
+
+        """
+        if count == 0:
+            raise unsolvable()
+        self.branches = count
+        self.velocity[:] = here.room.velocity
 
 
 class ToolGains:
@@ -181,7 +223,7 @@ class ToolGains:
         self.stiffness, self.damping = stiffness[self.rows], damping[self.rows]
         self.k_p = decay_rate(self.stiffness, self.damping)
 
-    def error(self, here: Evaluation, samples: Samples) -> tuple[Array, Array, Array]:
+    def error(self, here: Evaluation) -> tuple[Array, Array, Array]:
         """
         Pose error (p − p_d, log(R R_dᵀ)), reference velocity and Jacobian, in the rows in use.
 
@@ -189,7 +231,7 @@ class ToolGains:
         if self.motion is None:
             return np.zeros(0), np.zeros(0), np.zeros((0, here.arm.n))
         R, p, J = here.poses[self.motion]
-        pose = samples[self.reference]
+        pose: Any = here.targets[self.reference]
         error = np.zeros(6)
         error[:3] = p - pose.p
         rotation_log(R @ pose.R.T, error[3:])
@@ -207,20 +249,14 @@ class JointImpedance(Law):
     name = "joint_impedance"
     tracks = False
 
-    def torque(
-        self,
-        here: Evaluation,
-        samples: Samples,
-        there: Evaluation,
-        samples_there: Samples,
-        v: Array,
-        push_scale: float,
-    ) -> Torque:
+    def torque(self, here: Evaluation, there: Evaluation, v: Array, push_scale: float) -> None:
         """
         See :meth:`Law.torque`; needs no twin.
 
         """
-        return Torque(here.data.g.copy(), here.data.M @ self.spring_damper(here, v), here.v_d.copy())
+        self.prepare(here)
+        feedback = here.data.M @ self.spring_damper(here, v)
+        self.finish(here.data.g, feedback, here.room.claims.posture_feed_forward)
 
     def spring_damper(self, here: Evaluation, v: Array) -> Array:
         """
@@ -230,7 +266,10 @@ class JointImpedance(Law):
         posture = here.stack.posture
         if posture is None:
             return np.zeros_like(v)
-        return -posture.stiffness * here.posture_error - posture.damping * (v - here.v_d)
+        room = here.room
+        return -posture.stiffness * room.posture_error - posture.damping * (
+            v - room.claims.posture_feed_forward
+        )
 
 
 class CartesianImpedance(JointImpedance):
@@ -247,26 +286,19 @@ class CartesianImpedance(JointImpedance):
         super().__init__(arm, stack)
         self._tool = ToolGains(stack)
 
-    def torque(
-        self,
-        here: Evaluation,
-        samples: Samples,
-        there: Evaluation,
-        samples_there: Samples,
-        v: Array,
-        push_scale: float,
-    ) -> Torque:
+    def torque(self, here: Evaluation, there: Evaluation, v: Array, push_scale: float) -> None:
         """
         See :meth:`Law.torque`; needs no twin.
 
         """
-        tool = self._tool
-        error, V_d, J = tool.error(here, samples)
+        self.prepare(here)
+        tool, claims = self._tool, here.room.claims
+        error, V_d, J = tool.error(here)
         wrench = -tool.stiffness * error - tool.damping * (J @ v - V_d)
-        J_hat = J @ here.claims.L_inverse.T
-        posture = self.spring_damper(here, v) @ here.claims.L  # Lᵀ a: the same in whitened coordinates
+        J_hat = J @ claims.L_inverse.T
+        posture = self.spring_damper(here, v) @ claims.L  # Lᵀ a: the same in whitened coordinates
         free = posture - np.linalg.pinv(J_hat, rcond=1e-6) @ (J_hat @ posture)
-        return Torque(here.data.g.copy(), J.T @ wrench + here.claims.L @ free, here.v_d.copy())
+        self.finish(here.data.g, J.T @ wrench + claims.L @ free, claims.posture_feed_forward)
 
 
 class InverseJacobian(Law):
@@ -291,27 +323,30 @@ class InverseJacobian(Law):
         """
         return np.asarray(np.linalg.pinv(J), dtype=np.float64)
 
-    def reference(self, here: Evaluation, samples: Samples, twin: bool) -> Array:
+    def reference(self, here: Evaluation, nominal: Evaluation | None = None) -> Array:
         """
-        See :meth:`Law.reference`.
+        q̇_r (n,), rad/s; ``nominal`` is given for its finite-difference twin.
 
         """
-        error, V_d, J = self._tool.error(here, samples)
-        inverse = self.inverse(J)
-        posture = here.claims.posture
-        velocity: Array = inverse @ (V_d - self._tool.k_p * error - J @ posture) + posture
+        self.prepare(here, nominal)
+        error, V_d, J = self._tool.error(here)
+        posture = here.room.claims.posture
+        velocity: Array = self.inverse(J) @ (V_d - self._tool.k_p * error - J @ posture) + posture
         return velocity
 
-    def feedback(self, here: Evaluation, s: Array, push_scale: float) -> Array:
+    def torque(self, here: Evaluation, there: Evaluation, v: Array, push_scale: float) -> None:
         """
-        See :meth:`Law.feedback`.
+        See :meth:`Law.torque`.
 
         """
-        J = here.poses[0][2][self._tool.rows] if self._tool.motion is not None else np.zeros((0, s.size))
-        torque: Array = -J.T @ (self._tool.damping * (J @ s))
+        velocity = self.reference(here)
+        acceleration = (self.reference(there, here) - velocity) / TWIN_STEP
+        s = v - velocity
+        J = self._tool.error(here)[2]
+        feedback: Array = -J.T @ (self._tool.damping * (J @ s))
         if here.stack.posture:
-            torque -= here.stack.posture.damping * (here.data.M @ s)
-        return torque
+            feedback -= here.stack.posture.damping * (here.data.M @ s)
+        self.finish(inverse_dynamics(here.terms, velocity, acceleration), feedback, velocity)
 
 
 class DampedInverse(InverseJacobian):

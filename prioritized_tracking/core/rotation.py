@@ -13,6 +13,8 @@ from typing import TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
+from prioritized_tracking.compiled import compiled
+
 Array: TypeAlias = NDArray[np.float64]
 
 #: Below this angle (rad) sin(θ)/θ is 1 to machine precision: θ²/6 < 2e-16.
@@ -21,6 +23,7 @@ _SMALL = 3e-8
 _NEAR_PI = 3.0
 
 
+@compiled
 def rotation_log(R: Array, out: Array) -> float:
     """
     Rotation vector of a rotation matrix, shortest way round.
@@ -66,24 +69,33 @@ def rotation_log(R: Array, out: Array) -> float:
     return angle
 
 
-def rotation_exp(r: Array) -> Array:
+@compiled
+def advance_pose(
+    R: Array, p: Array, V: Array, A: Array, h: float, R_h: Array, p_h: Array, V_h: Array
+) -> None:
     """
-    Rotation matrix of a rotation vector (rad), Rodrigues' formula.
+    Move a pose along its velocity for a time so short that |ω h|³ is nothing.
 
     Parameters
     ----------
-    r : (3,) rotation vector.
-
-    Returns
-    -------
-    (3, 3) array
-        I + sin θ/θ [r]× + (1 − cos θ)/θ² [r]×².
+    R, p, V, A : pose, velocity (v, ω) and its derivative, base axes, m and rad per s and s².
+    h : time, s.
+    R_h, p_h, V_h : filled.
 
     """
-    angle = math.sqrt(r[0] * r[0] + r[1] * r[1] + r[2] * r[2])
-    half = 0.5 * angle
-    s = 1.0 if angle < _SMALL else math.sin(angle) / angle
-    v = 0.5 if angle < _SMALL else 0.5 * (math.sin(half) / half) ** 2
-    K = np.array([[0.0, -r[2], r[1]], [r[2], 0.0, -r[0]], [-r[1], r[0], 0.0]])
-    R: Array = np.eye(3) + s * K + v * (K @ K)
-    return R
+    p_h[:] = p + h * V[:3] + (0.5 * h * h) * A[:3]
+    V_h[:] = V + h * A
+    x, y, z = h * V[3:] + (0.5 * h * h) * A[3:]
+    K = np.array([[0.0, -z, y], [z, 0.0, -x], [-y, x, 0.0]])
+    turned = K @ R
+    R_h[:] = R + turned + 0.5 * (K @ turned)  # the exponential to second order: off by |ω h|³/6
+
+
+@compiled
+def advance_joints(q: Array, v: Array, a: Array, h: float, q_h: Array, v_h: Array) -> None:
+    """
+    Move joint positions (rad) along their velocity for a short time h (s); fill q_h and v_h.
+
+    """
+    q_h[:] = q + h * v + (0.5 * h * h) * a
+    v_h[:] = v + h * a

@@ -9,7 +9,10 @@ from __future__ import annotations
 
 import math
 
+from prioritized_tracking.compiled import compiled
 
+
+@compiled
 def smoothstep(z: float) -> float:
     """
     Quintic smoothstep S: 0 for z <= 0, 1 for z >= 1, C² everywhere.
@@ -25,6 +28,7 @@ def smoothstep(z: float) -> float:
     return z * z * z * (z * (6.0 * z - 15.0) + 10.0)
 
 
+@compiled
 def fade(z: float, zero: float, one: float) -> float:
     """
     Fade S((z − zero)/(one − zero)): 0 at ``zero``, 1 at ``one``, in either direction, C².
@@ -33,6 +37,7 @@ def fade(z: float, zero: float, one: float) -> float:
     return smoothstep((z - zero) / (one - zero))
 
 
+@compiled
 def saturation(x: float) -> float:
     """
     C² saturation σ of a non-negative number: identity up to 0.8, flat at 1 from 1.2 on.
@@ -48,9 +53,10 @@ def saturation(x: float) -> float:
     return y - 0.4 * z4 * (z * (z - 3.0) + 2.5)
 
 
+@compiled
 def wrap(angle: float) -> float:
     """
     Bring an angle (rad) into [−π, π].
 
     """
-    return angle - 2.0 * math.pi * round(angle / (2.0 * math.pi))
+    return angle - 2.0 * math.pi * math.floor(angle / (2.0 * math.pi) + 0.5)

@@ -11,18 +11,21 @@ finite-difference twin a moment later.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, partial
 
 import numpy as np
 
 from prioritized_tracking.charts.base import Chart, ChartWork, UnitRateChart
-from prioritized_tracking.charts.joints import JointChart, joint_error
+from prioritized_tracking.charts.joints import JointChart
 from prioritized_tracking.core.arm import Arm, frame_motion
-from prioritized_tracking.core.branches import Claims, Gains
+from prioritized_tracking.core.branches import Gains
 from prioritized_tracking.core.channels import Samples
+from prioritized_tracking.core.claims import Layout, allocate_room
+from prioritized_tracking.core.kernel import Terms
 from prioritized_tracking.core.references import JointSample, PoseSample
-from prioritized_tracking.core.rotation import Array
+from prioritized_tracking.core.rotation import Array, advance_joints, advance_pose
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -77,15 +80,6 @@ class Task:
 
         """
         return decay_rate(self.stiffness, self.damping)
-
-    @cached_property
-    def wraps(self) -> bool:
-        """
-        Whether the difference of coordinates may jump (angles), so that the twin must keep its turn.
-
-        """
-        own = type(self.chart).difference is not Chart.difference
-        return not self.chart.relative and (own or any(self.chart.angular))
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -153,6 +147,49 @@ class Stack:
         return tuple(dict.fromkeys((t.frame, t.base) for t in self.tasks if t.chart.kind == "pose"))
 
     @cached_property
+    def pose_references(self) -> tuple[str, ...]:
+        """
+        The different channels of the pose tasks, in order of appearance.
+
+        """
+        return tuple(dict.fromkeys(task.reference for task in self.tasks if task.chart.kind == "pose"))
+
+    @cached_property
+    def joint_references(self) -> tuple[str, ...]:
+        """
+        The different channels of the joint tasks and the posture.
+
+        """
+        names = [task.reference for task in self.tasks if task.chart.kind == "joints"]
+        return tuple(dict.fromkeys([*names, *([self.posture.reference] if self.posture else [])]))
+
+    def layout(self, arm: Arm) -> Layout:
+        """
+        How the tasks' rows are stacked. Rows of joint tasks are driven by a reference at rest.
+
+        """
+        sources = [
+            self.pose_references.index(task.reference)
+            if task.chart.kind == "pose"
+            else len(self.pose_references)
+            for task in self.tasks
+            for _ in range(task.m)
+        ]
+        return Layout(
+            first_row=np.array(self.first_row, dtype=np.int64),
+            task=np.array([i for i, t in enumerate(self.tasks) for _ in range(t.m)], dtype=np.int64),
+            rated=np.array(
+                [i for i, t in enumerate(self.tasks) if not isinstance(t.chart, UnitRateChart)],
+                dtype=np.int64,
+            ),
+            angular=np.array([a for task in self.tasks for a in task.chart.angular], dtype=np.bool_),
+            source=np.array(sources, dtype=np.int64),
+            k_p=np.concatenate([np.zeros(0), *(task.k_p for task in self.tasks)]),
+            continuous=np.array(arm.continuous, dtype=np.bool_),
+            posture_k_p=self.posture.k_p if self.posture else 0.0,
+        )
+
+    @cached_property
     def first_row(self) -> tuple[int, ...]:
         """
         Where each task's rows begin in the stacked Jacobian, and where the last ends.
@@ -181,127 +218,99 @@ class Evaluation:
     """
     A stack evaluated at one state; arrays allocated once.
 
-    All tasks share stacked arrays: Jacobian J = c · rows · motion, where ``motion`` stacks the
-    frames' Jacobians and, for tasks on joints, the identity.
-
     Attributes
     ----------
     data : what `core.arm` computed for the state.
+    room : everything the charts and the hierarchy work on.
     poses : for each of ``stack.motions`` the pose (R, p) of the frame in its base and its Jacobian.
-    charts : one `ChartWork` for each task.
-    claims : input of the hierarchy.
-    posture_error : (n,) q − q_d, rad, the short way round for joints without end.
-    q, q_d, v_d : (n,) measured joint positions, rad; those of the posture's reference, rad, rad/s.
+    targets : the references the charts are evaluated with, by channel.
+    terms : inertia, Coriolis, gravity and friction terms, for the law.
 
     """
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
-        n, m, r, frames = arm.n, stack.first_row[-1], len(stack.tasks), len(stack.motions)
+        n, frames, names = arm.n, len(stack.motions), stack.pose_references
+        most_rows = max((task.m for task in stack.tasks), default=1)
         self.arm, self.stack, self.data = arm, stack, arm.data()
-        self.q, self.q_d, self.v_d, self.posture_error = np.zeros((4, n))
-        self._motion = np.vstack([np.zeros((6 * frames, n)), np.eye(n)])
-        self._rows = np.zeros((m, 6 * frames + n))
-        self._vectors = np.zeros((4, m))
-        self._validity = np.zeros((m, 1))
-        self._k_p = np.concatenate([np.zeros(0), *(task.k_p for task in stack.tasks)])
+        room = allocate_room(n, stack.first_row[-1], len(stack.tasks), frames, len(names), most_rows)
+        self.room = room = room._replace(M=self.data.M)
+        self.terms = Terms(self.data.M, self.data.C, self.data.g, arm.viscous.copy(), arm.coulomb.copy())
+        self.poses = [(np.eye(3), np.zeros(3), room.motion[6 * f : 6 * f + 6]) for f in range(frames)]
         self._frames = [(arm.frame_id(frame), arm.frame_id(base)) for frame, base in stack.motions]
-        self.poses = [(np.eye(3), np.zeros(3), self._motion[6 * f : 6 * f + 6]) for f in range(frames)]
-        self._slices = [slice(a, b) for a, b in zip(stack.first_row, stack.first_row[1:], strict=False)]
-        self._pose_of = [
-            stack.motions.index((task.frame, task.base)) if task.chart.kind == "pose" else frames
-            for task in stack.tasks
-        ]
-        self.charts = [self._work(i, 6 if f < frames else n, 6 * f) for i, f in enumerate(self._pose_of)]
-        self.claims = Claims(
-            L=np.eye(n),
-            L_inverse=np.eye(n),
-            J=np.zeros((m, n)),
-            nu=np.zeros(m),
-            validity=np.zeros(r),
-            posture=np.zeros(n),
-            posture_feed_forward=np.zeros(n),
+        self._poses = {
+            name: PoseSample(np.eye(3), np.zeros(3), room.V[i], np.zeros(6)) for i, name in enumerate(names)
+        }
+        self._joints = {name: JointSample(*np.zeros((3, n))) for name in stack.joint_references}
+        if stack.posture:
+            self._joints[stack.posture.reference] = JointSample(
+                room.q_d, room.claims.posture_feed_forward, np.zeros(n)
+            )
+        self.targets: dict[str, PoseSample | JointSample] = {**self._poses, **self._joints}
+        self._tracks = [self._track_of(i) for i in range(len(stack.tasks))]
+
+    def _track_of(self, i: int) -> Callable[[], float]:
+        """
+        What evaluates the chart of task i and returns its validity; it works on views into ``room``.
+
+        """
+        task, stack, room = self.stack.tasks[i], self.stack, self.room
+        rows = slice(stack.first_row[i], stack.first_row[i + 1])
+        pose = task.chart.kind == "pose"
+        frame = stack.motions.index((task.frame, task.base)) if pose else len(stack.motions)
+        k = 6 if pose else self.arm.n
+        work = ChartWork(
+            room.x[rows],
+            room.x_d[rows],
+            room.x_dot_d[rows],
+            room.rows[rows, 6 * frame : 6 * frame + k],
+            room.rows_d[rows, :k],
+            room.rate[rows, : task.m],
+            room.rate_d[rows, : task.m],
         )
+        work.rate[:] = work.rate_d[:] = np.eye(task.m)
+        if isinstance(task.chart, JointChart):
+            joints = self._joints[task.reference]
+            return partial(task.chart.track_joints, room.q, joints.q, joints.v, work)
+        (R, p, _), target = self.poses[frame], self._poses[task.reference]
+        return partial(task.chart.track, R, p, target.R, target.p, target.V, work)
 
-    def _work(self, i: int, k: int, column: int) -> ChartWork:
+    def update(self, q: Array, samples: Samples) -> None:
         """
-        Views of task i into the stacked arrays.
-
-        """
-        rows = self._slices[i]
-        return ChartWork(
-            self.stack.tasks[i].m, k, self._vectors[:, rows], self._rows[rows, column : column + k]
-        )
-
-    def update(self, q: Array, samples: Samples, nominal: Evaluation | None = None) -> None:
-        """
-        Evaluate all tasks, after the arm terms have been computed into ``data``.
-
-        ν_r = c · rate · (ẋ_d − k_p x̃) and J = c · rows · J_frame.
+        Evaluate all charts at a state, after its arm terms have been computed into ``data``.
 
         Parameters
         ----------
         q : (n,) joint positions, rad.
         samples : one sample of each channel.
-        nominal : given for the finite-difference twin, which keeps the nominal evaluation's turns:
-            differences of angles must not jump by 2π between the two.
 
         """
-        self.q[:] = q
+        for name, pose in self._poses.items():
+            sample = samples[name]
+            pose.R[:], pose.p[:], pose.V[:], pose.A[:] = sample.R, sample.p, sample.V, sample.A
+        for name, joints in self._joints.items():
+            sample = samples[name]
+            joints.q[:], joints.v[:], joints.a[:] = sample.q, sample.v, sample.a
+        self._track(q)
+
+    def follow(self, nominal: Evaluation, q: Array, h: float) -> None:
+        """
+        Evaluate all charts at the twin of another evaluation, with its references moved on by h (s).
+
+        """
+        for pose, was in zip(self._poses.values(), nominal._poses.values(), strict=True):
+            advance_pose(was.R, was.p, was.V, was.A, h, pose.R, pose.p, pose.V)
+        for joints, before in zip(self._joints.values(), nominal._joints.values(), strict=True):
+            advance_joints(before.q, before.v, before.a, h, joints.q, joints.v)
+        self._track(q)
+
+    def _track(self, q: Array) -> None:
+        """
+        Poses and charts at joint positions q.
+
+        """
+        room = self.room
+        room.q[:] = q
         for (frame, base), (R, p, J) in zip(self._frames, self.poses, strict=True):
             frame_motion(self.arm, self.data, frame, base, R, p, J)
-        for i, work in enumerate(self.charts):
-            self._track(i, work, samples)
-            if nominal is not None and self.stack.tasks[i].wraps:
-                keep_turns(self.stack.tasks[i].chart, work, nominal.charts[i])
-            self._validity[self._slices[i]] = work.validity
-            self.claims.validity[i] = work.validity
-        _, _, error, x_dot_d = self._vectors
-        desired = x_dot_d - self._k_p * error
-        for i, work in enumerate(self.charts):
-            if not isinstance(self.stack.tasks[i].chart, UnitRateChart):
-                desired[self._slices[i]] = work.rate @ desired[self._slices[i]]
-        np.multiply(self._validity[:, 0], desired, out=self.claims.nu)
-        np.dot(self._validity * self._rows, self._motion, out=self.claims.J)
-        if self.stack.posture:
-            self._posture(self.stack.posture, samples[self.stack.posture.reference], nominal)
-        self.claims.L[:] = np.linalg.cholesky(self.data.M)
-        self.claims.L_inverse[:] = np.linalg.inv(self.claims.L)
-
-    def _track(self, i: int, work: ChartWork, samples: Samples) -> None:
-        """
-        Evaluate the chart of task i at the state and at its reference.
-
-        """
-        task = self.stack.tasks[i]
-        if isinstance(task.chart, JointChart):
-            target: JointSample = samples[task.reference]
-            task.chart.track_joints(self.q, target.q, target.v, work)
-        else:
-            R, p, _ = self.poses[self._pose_of[i]]
-            pose: PoseSample = samples[task.reference]
-            task.chart.track(R, p, pose.R, pose.p, pose.V, work)
-
-    def _posture(self, posture: PostureTask, target: JointSample, nominal: Evaluation | None) -> None:
-        """
-        The posture's reference velocity q̇_d − k_p x̃.
-
-        """
-        self.q_d[:], self.v_d[:] = target.q, target.v
-        if nominal is None:
-            self.posture_error[:] = joint_error(self.q, self.q_d, self.arm.continuous)
-        else:
-            self.posture_error[:] = nominal.posture_error + (self.q - nominal.q) - (self.q_d - nominal.q_d)
-        self.claims.posture_feed_forward[:] = target.v
-        self.claims.posture[:] = target.v - posture.k_p * self.posture_error
-
-
-def keep_turns(chart: Chart, twin: ChartWork, nominal: ChartWork) -> None:
-    """
-    Error of the twin from the nominal error and the small steps of x and x_d, which cannot wrap.
-
-    """
-    step = np.zeros_like(twin.error)
-    chart.difference(twin.x, nominal.x, step)
-    twin.error[:] = nominal.error + step
-    chart.difference(twin.x_d, nominal.x_d, step)
-    twin.error -= step
+        for i, track in enumerate(self._tracks):
+            room.claims.validity[i] = track()

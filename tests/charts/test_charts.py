@@ -86,10 +86,10 @@ def evaluated(chart, R, p):
     if not chart.relative:
         x, rows, rate = np.zeros(m), np.zeros((m, 6)), np.eye(m)
         return x, rows, rate, chart.evaluate(R, p, x, rows, rate)
-    work = ChartWork(m, 6)
-    chart.track(R, p, REFERENCE, np.zeros(3), np.zeros(6), work)
+    work = ChartWork.allocate(m, 6)
+    validity = chart.track(R, p, REFERENCE, np.zeros(3), np.zeros(6), work)
     # ω = J_l(x̃) x̃˙; pinocchio's Jexp3 is the right Jacobian, J_l(x̃) = J_r(−x̃)
-    return work.x.copy(), work.rows.copy(), pin.Jexp3(-work.x), work.validity
+    return work.x.copy(), work.rows.copy(), pin.Jexp3(-work.x), validity
 
 
 def random_poses(rng, count):
@@ -256,17 +256,21 @@ def test_differences_wrap_where_coordinates_are_angles(case):
 
 @every_chart
 def test_agreement_gives_exactly_the_reference_motion(case):
-    """At the reference pose x̃ = 0 and rate · ẋ_d = rows · V_d wherever the chart is valid."""
+    """At the reference pose both sides have the same coordinates, and relative charts pass V_d on."""
     chart, rng = case.make(), np.random.default_rng(8)
-    work = ChartWork(len(chart.coordinates), 6)
+    m = len(chart.coordinates)
     for R, p in random_poses(rng, 60):
-        V = rng.normal(size=6)
-        chart.track(R, p, R, p, V, work)
-        np.testing.assert_allclose(work.error, 0.0, atol=1e-12)
-        if work.validity > 0.0:
-            np.testing.assert_allclose(work.rate @ work.x_dot_d, work.rows @ V, atol=1e-12)
+        V, work = rng.normal(size=6), ChartWork.allocate(m, 6)
+        validity = chart.track(R, p, R, p, V, work)
+        np.testing.assert_allclose(work.x, work.x_d, atol=1e-12)
+        if chart.relative:
+            assert validity == 1.0
+            np.testing.assert_allclose(work.x_dot_d, work.rows @ V, atol=1e-12)
         else:
-            assert np.all(np.isfinite(work.x_dot_d))
+            assert validity == evaluated(chart, R, p)[3] ** 2
+            np.testing.assert_array_equal(work.rows, work.rows_d)
+            np.testing.assert_array_equal(work.rate, work.rate_d)
+            np.testing.assert_array_equal(work.x_dot_d, 0.0)
 
 
 def test_the_fade_of_each_chart_is_the_documented_one():
@@ -322,12 +326,14 @@ def test_joint_charts_select_joints_and_wrap_endless_ones(name):
     chart = REGISTRY[name](**({"names": ["c", "a"]} if name == "joints" else {}))
     chart.bind(("a", "b", "c"), (False, False, True))
     m = len(chart.coordinates)
-    work = ChartWork(m, 3)
+    work = ChartWork.allocate(m, 3)
     q, q_d, v_d = np.array([4.0, 1.0, 3.0]), np.array([-4.0, 0.5, -3.0]), np.array([0.1, 0.2, 0.3])
-    chart.track_joints(q, q_d, v_d, work)
+    assert chart.track_joints(q, q_d, v_d, work) == 1.0
     indices = list(chart.indices)
     np.testing.assert_array_equal(work.rows, np.eye(3)[indices])
-    np.testing.assert_allclose(work.error, np.array([8.0, 0.5, 6.0 - 2 * np.pi])[indices])
+    error = np.zeros(m)
+    chart.difference(work.x, work.x_d, error)
+    np.testing.assert_allclose(error, np.array([8.0, 0.5, 6.0 - 2 * np.pi])[indices])
     np.testing.assert_allclose(work.x_dot_d, v_d[indices])
     np.testing.assert_allclose(
         joint_error(q, q_d, np.array([False, False, True])), [8.0, 0.5, 6.0 - 2 * np.pi]

@@ -68,7 +68,7 @@ def chart_at(sequence: str, R: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.n
     Return angles (3,), E (3, 3), rate (3, 3) and validity of the chart at an orientation.
 
     """
-    work = ChartWork(3, 6)
+    work = ChartWork.allocate(3, 6)
     chart = Euler(sequence=sequence)
     validity = chart.evaluate(np.ascontiguousarray(R), np.zeros(3), work.x, work.rows, work.rate)
     assert not work.rows[:, :3].any()  # an orientation does not depend on where the frame is

@@ -15,7 +15,8 @@ import numpy as np
 import pytest
 
 from prioritized_tracking.core.arm import dynamics, frame_motion, inertia
-from prioritized_tracking.core.branches import Claims, Gains, allocate_branches
+from prioritized_tracking.core.branches import Gains, allocate_branches
+from prioritized_tracking.core.claims import Claims
 from prioritized_tracking.core.hierarchy import hierarchy
 from tests.arms import data_arm, random_states
 

@@ -20,31 +20,11 @@ import numpy as np
 from prioritized_tracking.core.arm.checks import Checks
 from prioritized_tracking.core.arm.joints import actuator_limit, position_limits, select_joints
 from prioritized_tracking.core.arm.model import Built, Recipe, build_model
-from prioritized_tracking.core.arm.motion import (
-    ArmData,
-    dynamics,
-    forward_dynamics,
-    frame_motion,
-    friction_torque,
-    inertia,
-    inverse_dynamics,
-)
+from prioritized_tracking.core.arm.motion import ArmData
 from prioritized_tracking.core.arm.plausibility import plausibility
 from prioritized_tracking.core.arm.urdf import read_description
 from prioritized_tracking.core.arm.urdf_elements import Array
 from prioritized_tracking.errors import InputError, Problem, nearest
-
-__all__ = [
-    "Arm",
-    "ArmData",
-    "build_arm",
-    "dynamics",
-    "forward_dynamics",
-    "frame_motion",
-    "friction_torque",
-    "inertia",
-    "inverse_dynamics",
-]
 
 GRAVITY = (0.0, 0.0, -9.81)
 

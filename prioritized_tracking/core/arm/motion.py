@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import pinocchio as pin
 
+from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.arm.urdf_elements import Array
 
 if TYPE_CHECKING:
@@ -142,12 +143,22 @@ def _carried(base_jacobian: Array, pose: Any, base: Any) -> Array:
     return carried
 
 
-def friction_torque(arm: Arm, v: Array) -> Array:
+@compiled
+def friction(v: Array, viscous: Array, coulomb: Array) -> Array:
     """
-    Return f(v), N·m: viscous, plus Coulomb smoothed over `FRICTION_SPEED`.
+    Return viscous friction, plus Coulomb friction smoothed over `FRICTION_SPEED`, N·m.
 
     """
-    return arm.viscous * v + arm.coulomb * np.tanh(v / FRICTION_SPEED)
+    torque: Array = viscous * v + coulomb * np.tanh(v / FRICTION_SPEED)
+    return torque
+
+
+def friction_torque(arm: Arm, v: Array) -> Array:
+    """
+    Return f(v), N·m, of an arm's own friction.
+
+    """
+    return friction(v, arm.viscous, arm.coulomb)
 
 
 def forward_dynamics(arm: Arm, data: ArmData, q: Array, v: Array, tau: Array) -> Array:
