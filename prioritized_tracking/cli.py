@@ -46,6 +46,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """
     from prioritized_tracking.errors import InputError
 
+    for name in ("stdout", "stderr"):
+        if getattr(sys, name) is None:  # closed by the caller; results go to files all the same
+            setattr(sys, name, open(os.devnull, "w", encoding="utf-8"))  # noqa: SIM115
     for stream in (sys.stdout, sys.stderr):
         # A file name of the user's or a unit sign may not exist in the terminal's encoding.
         if isinstance(stream, io.TextIOWrapper):

@@ -5,6 +5,7 @@ The command line as a user meets it: results, exit codes, and a clear message fo
 
 """
 
+import errno
 import json
 import os
 import shutil
@@ -298,14 +299,34 @@ def test_a_path_out_of_reach_is_said_with_where_and_how_far(command, folder):
         ("missing/file.csv", "no folder"),
         ("reach_limit.csv", "overwrite an input"),
         ("planar_stack.yaml", "overwrite an input"),
+        ("planar_arm.urdf", "overwrite an input"),
     ],
 )
 def test_companion_refuses_unsuitable_files(command, folder, out, words):
-    before = (folder / "reach_limit.csv").read_bytes()
+    before = {path.name: path.read_bytes() for path in folder.iterdir()}
     code, _, errors = command("companion", "STACK", "--out", folder / out)
     assert code == 2
     assert words in errors
-    assert (folder / "reach_limit.csv").read_bytes() == before
+    assert {path.name: path.read_bytes() for path in folder.iterdir()} == before
+
+
+def test_companion_does_not_replace_a_device_or_a_pipe(command, folder):
+    """
+    The superuser may move a file onto a device, which would then be gone for the whole machine.
+
+    """
+    os.mkfifo(folder / "pipe")
+    code, _, errors = command("companion", "STACK", "--out", folder / "pipe")
+    assert code == 2
+    assert "no regular file" in errors
+    assert (folder / "pipe").is_fifo()
+
+
+def test_a_companion_that_is_missing_comes_with_the_command_that_makes_it(command, folder):
+    (folder / "reach_limit_companion.csv").unlink()
+    code, _, errors = command("rehearse", "STACK", "--out", folder / "out")
+    assert code == 2
+    assert "prioritized-tracking companion STACK.yaml --out reach_limit_companion.csv" in errors
 
 
 def test_companion_leaves_a_device_alone(command, folder):
@@ -338,6 +359,7 @@ def test_companion_of_an_unknown_channel(command, folder):
         (("rehearse", "STACK", "--out", "OUT", "--law", "inverse_jacobain"), "'inverse_jacobian'"),
         (("rehearse", "STACK", "--out", "OUT", "--seconds", "1", "--settle", "1"), "--settle"),
         (("rehearse", "STACK", "--out", "OUT", "--settle", "17"), "16 s"),
+        (("rehearse", "STACK", "--out", "OUT", "--seconds", "1", "--settle", "0.9999"), "--settle"),
         (("rehearse", "STACK", "--out", "OUT", "--seconds", "1e9"), "GiB"),
         (("rehearse", "STACK", "--out", "OUT", "--set", "plant.seed"), "key=value"),
         (("rehearse", "STACK", "--out", "OUT", "--set", "plant.sede=3"), "'seed'"),
@@ -403,6 +425,45 @@ def test_a_full_disk_is_an_error_in_one_line(folder):
     assert done.stderr == "prioritized-tracking: error: No space left on device\n"
 
 
+def test_a_full_disk_is_said_with_the_file(command, folder, monkeypatch):
+    def full(*_args, **_kwargs):
+        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    monkeypatch.setattr(np, "savez", full)
+    code, _, errors = command("rehearse", "STACK", "--out", folder / "out", "--seconds", 0.05)
+    assert code == 2
+    path = folder / "out" / "signals_prioritized.npz"
+    assert errors.endswith(f"prioritized-tracking: error: {path}: No space left on device\n")
+    assert sorted(path.name for path in (folder / "out").iterdir()) == ["stack.yaml"]
+
+
+@pytest.mark.parametrize("closed", [">&-", ">&- 2>&-"])
+def test_closed_output_is_no_error(folder, closed):
+    line = f'"{sys.executable}" -m prioritized_tracking rehearse "$1" --out "$2" --seconds 0.05 {closed}'
+    done = subprocess.run(
+        ["sh", "-c", line, "sh", str(folder / "planar_stack.yaml"), str(folder / "out")],
+        cwd=ROOT, capture_output=True, text=True, check=False,
+    )  # fmt: skip
+    assert done.returncode == 0, done.stderr
+    assert "Traceback" not in done.stderr
+
+
+def test_notes_are_said_once(command, folder):
+    """
+    A path that does not rest at its ends gives a note about its channel.
+
+    """
+    rows = (folder / "reach_limit.csv").read_text(encoding="utf-8").splitlines()
+    moving = [rows[0], *(f"{float(row.split(',')[0]) - 3.0},{row.split(',', 1)[1]}" for row in rows[61:201])]
+    (folder / "reach_limit.csv").write_text("\n".join(moving) + "\n")
+    assert command("companion", "STACK", "--out", folder / "reach_limit_companion.csv")[0] == 0
+    code, text, _ = command("rehearse", "STACK", "--out", folder / "out", "--seconds", 0.05)
+    assert code == 0
+    notes = [line for line in text.splitlines() if line.startswith("note: ")]
+    assert any("does not rest" in note for note in notes)
+    assert len(notes) == len(set(notes))
+
+
 # ---- help ------------------------------------------------------------------------------------------
 
 
@@ -446,3 +507,26 @@ def test_environment_of_numerical_libraries_is_left_to_the_user(command, monkeyp
     command("rehearse", "nowhere.yaml", "--out", folder / "out")
     assert os.environ["OMP_NUM_THREADS"] == "3"
     assert os.environ.pop("OPENBLAS_NUM_THREADS") == "1"
+
+
+def test_the_margin_of_a_sliding_joint_is_in_metres(command, folder):
+    """
+    A slide of 0.4 m along x carries the planar arm; its limits are the nearest ones.
+
+    """
+    text = (folder / "planar_arm.urdf").read_text(encoding="utf-8")
+    slide = (
+        '<link name="rail"/><joint name="slide" type="prismatic">'
+        '<parent link="rail"/><child link="base_link"/>'
+        '<axis xyz="0 1 0"/><limit lower="-0.2" upper="0.2" effort="900" velocity="1"/></joint></robot>'
+    )
+    (folder / "planar_arm.urdf").write_text(text.replace("</robot>", slide), encoding="utf-8")
+    sets = [
+        "robot.joints=[slide, shoulder, elbow]", "robot.rotor_inertia=[1.0, 0.3, 0.1]", "tasks.pen.axes=xyz",
+    ]  # fmt: skip
+    words = [word for change in sets for word in ("--set", change)]
+    code, text, errors = command("companion", "STACK", "--out", folder / "new.csv", *words)
+    assert code == 0, errors
+    line = next(line for line in text.splitlines() if line.startswith("nearest joint limit"))
+    assert " 0.2 m at " in line
+    assert line.endswith("joint slide")

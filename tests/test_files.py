@@ -378,3 +378,14 @@ def test_long_files_load_in_seconds(tmp_path):
     loaded = PosePath(*read_pose_csv(path))
     assert time.perf_counter() - begin < 10.0  # 0.8 s on one slow core; a loaded machine is no failure
     assert len(loaded.knots) == count
+
+
+def test_a_pipe_is_not_replaced_by_a_file(tmp_path):
+    """
+    Nor a device: the superuser may move a file onto one, which is then gone.
+
+    """
+    os.mkfifo(tmp_path / "pipe")
+    problem = problems(write_joints_csv, tmp_path / "pipe", [0.0], ("a",), [[0.0]])[0]
+    assert problem.got == "not a regular file"
+    assert (tmp_path / "pipe").is_fifo()

@@ -90,6 +90,7 @@ def test_the_example_arm_goes_the_whole_way(tmp_path, monkeypatch, capsys):
     assert verbs == ["companion", "rehearse", "rehearse"]
     summary = json.loads(Path("results/summary.json").read_text(encoding="utf-8"))
     table = README.split("### Reading the results")[1].split("## How it works")[0]
+    table, signals = table.split("Signals by name")
     named = set(re.findall(r"`([a-z_]+)(?:\.[A-Z]+)?`", table)) - {
         "fail",
         "pass",
@@ -98,7 +99,14 @@ def test_the_example_arm_goes_the_whole_way(tmp_path, monkeypatch, capsys):
         "settle_s",
     }
     task, tool = summary["tasks"]["tip"], summary["tool"]["probe"]
-    assert named - summary.keys() - task.keys() - tool.keys() == {"_all"}
+    joint = next(iter(summary["joints"].values()))
+    assert named - summary.keys() - task.keys() - tool.keys() - joint.keys() == {"_all"}
+    with np.load("results/signals_prioritized.npz") as stored:
+        kinds = {
+            re.sub("^probe", "FRAME", re.sub(r"^(tip|tool_zyz|tool_xyz|posture)\.", "TASK.", n))
+            for n in stored
+        }
+    assert set(re.findall(r"`([A-Za-z_.]+)`", signals)) == kinds
     assert Path("results/signals_cartesian_impedance.npz").is_file()
     assert Path("results/stack.yaml").is_file()
 

@@ -52,6 +52,9 @@ def spread_configurations(arm: Arm, count: int = SAMPLES) -> Array:
     order = slice(None) if arm.built.order is None else arm.built.order
     points = np.empty((count, arm.n))
     points[:, order] = qmc.Sobol(d=arm.n, scramble=False).random(count)
+    if any(len(np.unique(column)) < count for column in points.T):
+        # Ctrl-C while SciPy reads its direction numbers is swallowed there, and the points coincide
+        raise KeyboardInterrupt
     positions: Array = lower + points * (upper - lower)
     return positions
 

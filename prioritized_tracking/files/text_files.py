@@ -172,5 +172,9 @@ def whole_file(path: Path) -> Iterator[IO[bytes]]:
         with draft.open("wb") as file:
             yield file
         os.replace(draft, path)
+    except OSError as error:
+        # a full disk is noticed by a write, which knows no name
+        error.filename = error.filename or str(path)
+        raise
     finally:
         draft.unlink(missing_ok=True)

@@ -8,6 +8,7 @@ The verb `companion`: from a stack file to the joint path that goes with its too
 from __future__ import annotations
 
 import os
+import re
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
@@ -70,11 +71,11 @@ def figures(found: Companion) -> list[str]:
     lines = [
         line("largest distance from the path", found.position_residual, " m"),
         line("largest angle from the path", found.orientation_residual, " rad"),
-        line("nearest joint limit", found.limit_margin, " rad"),
+        line("nearest joint limit", found.limit_margin, f" {found.limit_margin.unit}"),
         line("highest joint speed, share of its limit", found.speed, ""),
         line("smallest singular value of the task", found.singular, ""),
     ]
-    return [text.replace("inf rad at 0.000 s", "no limits") for text in lines]
+    return [re.sub("inf (rad|m) at 0.000 s", "no limits", text) for text in lines]
 
 
 def _followed(file: StackFile) -> str | None:
@@ -116,11 +117,13 @@ def _target_problems(target: Path) -> list[Problem]:
 
 def _keep_sources(file: StackFile, target: Path) -> None:
     """
-    Refuse to overwrite the stack file or a path it reads.
+    Refuse to overwrite the stack file, the arm or a path it reads.
 
     """
     entries = file.tree["references"].values()
     paths = [entry["file"] for entry in entries if entry["file"] and entry["source"] == "file"]
+    if urdf := file.tree["robot"]["urdf"]:
+        paths.append(urdf)
     sources = (file.path, *(resolve(file, path) for path in paths))
     if target.exists() and any(target.samefile(source) for source in sources if source.exists()):
         raise InputError(

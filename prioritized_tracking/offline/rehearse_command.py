@@ -69,7 +69,7 @@ def run(
     first = next(iter(controllers.values()))
     seconds = default_seconds(first) if seconds is None else seconds
     settle = settling_time(seconds) if settle is None else settle
-    if problems := _window_problems(seconds, settle):
+    if problems := _window_problems(seconds, settle, 1.0 / first.rate):
         raise InputError(problems)
     _prepare(folder, first.stack_file.text)
     notes = [*first.notes, f"control law {compiled.STATUS}"]
@@ -245,8 +245,12 @@ def _law_problems(laws: Sequence[str], known: Sequence[str]) -> list[Problem]:
     ]
 
 
-def _window_problems(seconds: float | None, settle: float | None) -> list[Problem]:
-    if seconds is None or settle is None or settle < seconds:
+def _window_problems(seconds: float | None, settle: float | None, period: float = 0.0) -> list[Problem]:
+    """
+    Return what is wrong with the time to measure: not a cycle of `period`, s, would be left.
+
+    """
+    if seconds is None or settle is None or (settle < seconds and settle <= max(seconds - period, 0.0)):
         return []
     return [
         Problem(

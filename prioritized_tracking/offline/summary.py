@@ -189,10 +189,11 @@ def _joint_reasons(run: Run) -> Iterator[str]:
         figures = _joint_figures(run, i)
         margin, speed = figures["margin_rad"], figures["speed_peak"]
         if margin is not None and margin < 0.0:
-            yield f"joint {name} crossed a position limit by {-margin:.3g} rad"
+            yield f"joint {name} crossed a position limit by {-margin:.3g} {figures['unit']}"
         limit = float(run.arm.velocity_limit[i])
         if speed is not None and speed > limit:
-            yield f"joint {name} reached {speed:.3g} rad/s, its limit is {limit:.3g} rad/s"
+            unit = f"{figures['unit']}/s"
+            yield f"joint {name} reached {speed:.3g} {unit}, its limit is {limit:.3g} {unit}"
 
 
 def _tool_figures(run: Run, frame: str, window: NDArray[np.bool_]) -> dict[str, float | None]:
@@ -250,10 +251,11 @@ def _torque_figures(run: Run, joint: int, window: NDArray[np.bool_]) -> dict[str
     }
 
 
-def _joint_figures(run: Run, joint: int) -> dict[str, float | None]:
+def _joint_figures(run: Run, joint: int) -> dict[str, Any]:
     q, v = run.signals["q"][:, joint], run.signals["v"][:, joint]
     margin = np.minimum(q - run.arm.lower[joint], run.arm.upper[joint] - q)
-    return {"margin_rad": _least(margin), "speed_peak": _largest(np.abs(v))}
+    unit = run.arm.joint_units[joint]
+    return {"margin_rad": _least(margin), "speed_peak": _largest(np.abs(v)), "unit": unit}
 
 
 def _longest(active: NDArray[np.bool_]) -> int:

@@ -96,10 +96,12 @@ def _law_column(figures: Mapping[str, Any]) -> dict[str, str]:
     torque, joints = figures["torque"].values(), figures["joints"].values()
     shares = figures["share_sum"]
     loads = [joint["peak_nm"] / joint["limit_nm"] for joint in torque if joint["peak_nm"] is not None]
-    margins = [joint["margin_rad"] for joint in joints if joint["margin_rad"] is not None]
     column["largest torque step, N·m per cycle"] = number(worst_step(figures)[1])
     column["highest torque, % of limit"] = number(100.0 * max(loads)) if loads else _MISSING
-    column["nearest joint limit, rad"] = number(min(margins)) if margins else _MISSING
+    for unit in dict.fromkeys(joint["unit"] for joint in joints):
+        margins = [joint["margin_rad"] for joint in joints if joint["unit"] == unit]
+        known = [margin for margin in margins if margin is not None]
+        column[f"nearest joint limit, {unit}"] = number(min(known)) if known else _MISSING
     column["sum of shares"] = _range(shares["min"], shares["max"])
     column["speed, times real time"] = number(figures["compute_ratio"])
     return column

@@ -16,7 +16,7 @@ from pathlib import Path
 from typing import Any
 
 from prioritized_tracking.errors import InputError, nearest
-from prioritized_tracking.parameters.stack_paths import fault_of_file, resolve_path
+from prioritized_tracking.parameters.stack_paths import NO_FILE, fault_of_file, resolve_path
 from prioritized_tracking.parameters.stack_tasks import POSTURE
 from prioritized_tracking.parameters.stack_values import Reading, shown_scalar
 from prioritized_tracking.parameters.yaml_dialect import shortened
@@ -366,7 +366,11 @@ def check_files(
             continue
         fault = fault_of_file(file)
         if fault:
-            reading.report(path, fault[0], got=shortened(str(file), 160), remedy=fault[1])
+            remedy = fault[1]
+            computed = path[0] == "references" and _at(tree, (*path[:2], "source")) == "companion"
+            if computed and fault[0] == NO_FILE:
+                remedy = f"Compute it: prioritized-tracking companion STACK.yaml --out {shortened(value)}"
+            reading.report(path, fault[0], got=shortened(str(file), 160), remedy=remedy)
 
 
 def _file_keys(tree: Tree, charts: Mapping[str, Any], *, new_companions: bool) -> Iterator[tuple[str, ...]]:

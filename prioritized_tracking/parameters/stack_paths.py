@@ -19,6 +19,9 @@ from pathlib import Path
 from prioritized_tracking.errors import InputError, Problem
 from prioritized_tracking.parameters.yaml_dialect import shortened
 
+NO_FILE = "no such file"
+"""Fault of a file that is not there."""
+
 _SCHEME = "package://"
 
 
@@ -97,7 +100,7 @@ def fault_of_file(path: Path) -> tuple[str, str] | None:
         with path.open("rb"):
             return None
     except FileNotFoundError:
-        return "no such file", _nearest_file(path)
+        return NO_FILE, _nearest_file(path)
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
         return f"cannot be read ({reason})", "Check its name and its permissions."

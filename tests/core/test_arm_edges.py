@@ -8,6 +8,7 @@ Between good and bad: mimic joints, what is accepted with a warning, and input o
 from __future__ import annotations
 
 import contextlib
+import re
 
 import numpy as np
 import pytest
@@ -19,6 +20,7 @@ from prioritized_tracking.errors import InputError
 from tests.arms import body, data_arm, joint, planar_arm, planar_urdf
 
 GOOD = planar_urdf()
+MASSLESS = re.sub(r'(<link name="link2">)<inertial>.*?</inertial>', r"\1", GOOD, flags=re.DOTALL)
 
 
 # ---- mimic joints ----------------------------------------------------------------------------------
@@ -110,6 +112,10 @@ def test_huge_limits_are_none():
         (lambda: data_arm("talos_left_arm"), ["arm_left_2_joint: gravity needs up to 27 of 22.3"]),
         (lambda: planar_arm(effort=1.0), ["j1: gravity needs up to", "cannot carry"]),
         (lambda: planar_arm(payload={"frame": "base", "mass": 1.0}), ["payload.frame: link 'base' does"]),
+        (
+            lambda: build_arm(MASSLESS, rotor_inertia=[0.1, 0.1]),
+            ["<urdf>:", "joint 'j2': the link it moves has no mass"],
+        ),
         (lambda: planar_arm(locked={"j2": 3.1}), ["robot.locked.j2: held at 3.1, outside its limits -3 … 3"]),
         (
             lambda: build_arm(planar_urdf().replace('ixx="0.041666666666666664"', 'ixx="0.01"')),

@@ -184,6 +184,14 @@ def test_bad_settings(settings, what, where):
     assert len(found) == 1 or settings.keys() & {"joints", "payload"}  # one fault, one problem
 
 
+def test_a_list_of_wrong_length_comes_with_the_joints_it_is_for():
+    with pytest.raises(InputError) as caught:
+        planar_arm(rotor_inertia=[0.1, 0.2, 0.3])
+    (problem,) = caught.value.problems
+    assert problem.expected == "2 finite numbers in kg·m², at least 0, one per joint (j1, j2)"
+    assert problem.got == "[0.1, 0.2, 0.3]"
+
+
 def test_all_problems_come_at_once():
     """
     Faults of the URDF's figures and of every setting in one message.

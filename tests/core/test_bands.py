@@ -8,6 +8,7 @@ Default hand-over bands, against a naive version of their definition.
 from __future__ import annotations
 
 import numpy as np
+import pytest
 import scipy.linalg
 from scipy.stats import qmc
 
@@ -130,3 +131,16 @@ def test_the_band_is_ten_to_a_hundred_times_the_median():
         share = smoothstep((np.log(high) + np.log(max(weakest, 1e-300))) / np.log(high / low))
         inside += 0.0 < share < 1.0
     assert inside <= 0.1 * bands.SAMPLES
+
+
+@pytest.mark.parametrize("broken", [[0.0, 0.0], [0.5, 0.0]])
+def test_an_interrupt_that_scipy_swallowed_is_raised_again(monkeypatch, broken):
+    """Ctrl-C while SciPy reads its direction numbers leaves points that coincide, and false bands."""
+    real = qmc.Sobol.random
+
+    def spoiled(self, n):
+        return real(self, n) * (np.array(broken) > 0.0)
+
+    monkeypatch.setattr(qmc.Sobol, "random", spoiled)
+    with pytest.raises(KeyboardInterrupt):
+        bands.spread_configurations(planar_arm((0.5, 0.4)))

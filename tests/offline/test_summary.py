@@ -28,7 +28,9 @@ def report(error=(0.0, 0.0), share=2.0, inertia=3.0, validity=1.0):
     return SimpleNamespace(error=np.array(error), share=share, apparent_inertia=inertia, validity=validity)
 
 
-def make_run(change=None, *, law="prioritized", ended="complete", tolerance=None, events=()):
+def make_run(
+    change=None, *, law="prioritized", ended="complete", tolerance=None, events=(), units=("rad", "rad")
+):
     """
     Return a run of 2 s at 10 Hz in which nothing happens, but for what `change(k, cycle)` does to cycle k.
 
@@ -38,6 +40,7 @@ def make_run(change=None, *, law="prioritized", ended="complete", tolerance=None
         upper=np.array([2.0, np.inf]),
         velocity_limit=np.array([3.0, 4.0]),
         torque_limit=np.array([50.0, 20.0]),
+        joint_units=units,
     )
     signals = Signals(JOINTS, ("tool",), {"seam": 2}, COUNT)
     for k in range(COUNT):
@@ -97,7 +100,7 @@ def test_a_quiet_run_passes_with_the_documented_keys():
     assert set(summary["torque"]["a"]) == {
         "peak_nm", "peak_nm_all", "limit_nm", "largest_step_nm", "largest_step_nm_all",
     }  # fmt: skip
-    assert set(summary["joints"]["a"]) == {"margin_rad", "speed_peak"}
+    assert set(summary["joints"]["a"]) == {"margin_rad", "speed_peak", "unit"}
     assert summary["duration_s"] == 2.0
     assert summary["rate_hz"] == RATE
     assert summary["seed"] == 7
@@ -356,3 +359,16 @@ def test_tables_show_three_digits_and_a_dash_for_nothing():
     text = table.tasks_table(figures(), width=200)
     assert "seam" in text
     assert "10 … 100" in text
+
+
+def test_a_sliding_joint_is_measured_in_metres():
+    def change(k, cycle):
+        cycle.v = np.array([0.0, 5.0]) if k == 3 else np.zeros(2)
+
+    summary = figures(change, units=("rad", "m"))
+    assert summary["joints"]["a"]["unit"] == "rad"
+    assert summary["joints"]["b"]["unit"] == "m"
+    assert summary["reasons"] == ["joint b reached 5 m/s, its limit is 4 m/s"]
+    text = table.laws_table({"prioritized": summary}, width=100)
+    assert "nearest joint limit, rad" in text
+    assert "nearest joint limit, m " in text

@@ -100,6 +100,15 @@ class Arm:
         return self.recipe.gravity
 
     @property
+    def joint_units(self) -> tuple[str, ...]:
+        """
+        Unit of each joint's position: rad, or m where it slides.
+
+        """
+        known = self.recipe.description.joints
+        return tuple("m" if known[name].kind == "prismatic" else "rad" for name in self.joints)
+
+    @property
     def rotor_inertia(self) -> Array:
         """
         Rotor inertia reflected to the joints, kg·m².
@@ -166,7 +175,7 @@ class Arm:
             With every problem found.
 
         """
-        checks = Checks(key=key)
+        checks = Checks(key=key, joints=self.joints)
         recipe = self.recipe
         scale = checks.mass_scale(mass_scale, self.frames, recipe.mass_scale)
         carried = checks.payload(payload, recipe.description)
@@ -230,6 +239,7 @@ def build_arm(
     if description is None:
         raise InputError(checks.problems)
     chosen, held, n = select_joints(checks, description, joints, locked)
+    checks.joints = chosen
     rotor = checks.vector("rotor_inertia", rotor_inertia, np.zeros(n), low=0.0, unit="kg·m²")
     carried = checks.payload(payload, description)
     recipe = Recipe(description, chosen, held, pull, rotor, carried)

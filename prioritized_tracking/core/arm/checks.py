@@ -32,10 +32,13 @@ class Checks:
     ----------
     key : str
         Prefix of the key paths, e.g. ``robot``.
+    joints : tuple of str
+        Controlled joints, once they are known.
 
     """
 
     key: str
+    joints: tuple[str, ...] = ()
     problems: list[Problem] = field(default_factory=list)
     warnings: list[str] = field(default_factory=list)
 
@@ -75,9 +78,12 @@ class Checks:
         bound = "" if low == -np.inf else f", {'above' if exclusive else 'at least'} {low:g}"
         count = f"{default.size} finite numbers" if default.ndim else "one finite number"
         expected = f"{count} in {unit}{bound}" + (f", one per {each}" if default.ndim else "")
+        if each == "joint" and len(self.joints) == default.size:
+            expected += f" ({', '.join(self.joints)})"
         values = numbers(value)
         if values is None or values.shape != default.shape:
-            self.add(where, "not a list of that many numbers", expected=expected, got=shown(value))
+            got = shown(value if values is None or values.ndim != 1 else values.tolist())
+            self.add(where, "not a list of that many numbers", expected=expected, got=got)
             return default
         fits = np.isfinite(values) & ((values > low) if exclusive else (values >= low))
         if not np.all(fits):

@@ -45,7 +45,12 @@ def plausibility(arm: Arm, checks: Checks) -> list[str]:
         return []
     if not _inertia_is_regular(arm, M, checks):
         return []
-    return [*_light_joints(arm, M, checks.key), *_heavy_arm(arm, g), *_resting_payload(arm, checks.key)]
+    return [
+        *_massless_links(arm),
+        *_light_joints(arm, M, checks.key),
+        *_heavy_arm(arm, g),
+        *_resting_payload(arm, checks.key),
+    ]
 
 
 def sample_configurations(lower: Array, upper: Array, count: int) -> Array:
@@ -88,6 +93,20 @@ def _inertia_is_regular(arm: Arm, M: Array, checks: Checks) -> bool:
         remedy=f"Complete <inertial> of the links these joints move, or give {checks.key}.rotor_inertia.",
     )
     return False
+
+
+def _massless_links(arm: Arm) -> list[str]:
+    """
+    Warn about joints whose link, with all that is fixed to it, has no mass: <inertial> forgotten?
+
+    """
+    model = arm.model
+    empty = {model.names[k] for k in range(1, model.njoints) if model.inertias[k].mass == 0.0}
+    return [
+        f"{arm.recipe.description.joints[name].where}: the link it moves has no mass: <inertial> forgotten?"
+        for name in arm.joints
+        if name in empty
+    ]
 
 
 def _light_joints(arm: Arm, M: Array, key: str) -> list[str]:

@@ -31,12 +31,14 @@ class Peak:
     value : float
     at_s : file time, s.
     joint : name of the joint, if it belongs to one.
+    unit : of a value in the unit of its joint, rad or m; empty for other values.
 
     """
 
     value: float
     at_s: float
     joint: str = ""
+    unit: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -53,8 +55,8 @@ class Companion:
     position_residual, orientation_residual : the same with the time; zero where they do not count.
     linear_residual, angular_residual : largest difference of the tool's velocity from the path's, m/s
         and rad/s.
-    limit_margin_rad : smallest distance to a joint limit; infinite without limits.
-    limit_margin : the same with time and joint.
+    limit_margin_rad : smallest distance to a joint limit, m where the joint slides; infinite without limits.
+    limit_margin : the same with time, joint and unit.
     speed_ratio : largest joint speed as a fraction of its limit, at the pace asked for.
     speed : the same with time and joint.
     torque : largest torque the motion takes as a fraction of its limit, at that pace.
@@ -96,7 +98,7 @@ class Companion:
     @property
     def limit_margin_rad(self) -> float:
         """
-        Smallest distance to a joint limit, rad; negative beyond it.
+        Smallest distance to a joint limit, rad (m where the joint slides); negative beyond it.
 
         """
         return self.limit_margin.value
@@ -197,7 +199,8 @@ def report(task: Task, solution: Solution, seen: Survey) -> Companion:
 
     def of_joint(values: Array, index: int) -> Peak:
         k, i = divmod(index, len(joints))
-        return Peak(value=float(values[k, i]), at_s=float(seen.times[k]), joint=joints[i])
+        unit = task.arm.joint_units[i] if values is margin else ""
+        return Peak(value=float(values[k, i]), at_s=float(seen.times[k]), joint=joints[i], unit=unit)
 
     nearest = int(np.argmin(seen.singular))
     hardest = of_joint(torque, int(np.argmax(torque)))
