@@ -31,6 +31,17 @@ def rate_bound(delay_cycles: int) -> float:
     return 2.0 * math.sin(math.pi / (2.0 * (2 * delay_cycles + 1)))
 
 
+def error_rate(stack: Stack) -> float:
+    """
+    Largest k_p of a stack, 1/s.
+
+    """
+    k_p = [float(task.k_p.max()) for task in stack.tasks]
+    if stack.posture:
+        k_p.append(stack.posture.k_p)
+    return max(k_p, default=0.0)
+
+
 def decay_rates(stack: Stack, D: Array) -> tuple[float, float]:
     """
     The two parts of r = λ_max(D) + max k_p, 1/s.
@@ -41,7 +52,4 @@ def decay_rates(stack: Stack, D: Array) -> tuple[float, float]:
     D : (n, n) feedback in whitened coordinates, 1/s.
 
     """
-    k_p = [float(task.k_p.max()) for task in stack.tasks]
-    if stack.posture:
-        k_p.append(stack.posture.k_p)
-    return float(np.linalg.eigvalsh(D)[-1]), max(k_p, default=0.0)
+    return float(np.linalg.eigvalsh(D)[-1]), error_rate(stack)

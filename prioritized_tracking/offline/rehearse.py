@@ -20,6 +20,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from prioritized_tracking.core.sampling import error_rate
 from prioritized_tracking.core.velocity import filtered_velocity
 from prioritized_tracking.errors import InputError, Problem
 from prioritized_tracking.offline.plant import (
@@ -31,7 +32,7 @@ from prioritized_tracking.offline.plant import (
     initial_state,
     measure,
 )
-from prioritized_tracking.offline.run import Event, Run, TaskFacts
+from prioritized_tracking.offline.run import Event, GainCheck, Run, TaskFacts
 from prioritized_tracking.offline.signals import Signals
 
 Array = NDArray[np.float64]
@@ -49,6 +50,7 @@ MOST_EVENTS = 1000
 """Events kept of one run; a law that trips in every cycle is not worth a million lines."""
 
 _METER_CYCLES = 100
+_GAIN_CYCLES = 20
 
 
 class Controller(Protocol):
@@ -63,6 +65,7 @@ class Controller(Protocol):
     arm: Any
     stack_file: Any
     stack: Any
+    law: Any
     tools: Mapping[str, Any]
     described: Mapping[str, frozenset[str]]
     channels: Mapping[str, Any]
@@ -202,6 +205,8 @@ def _loop(
         if command is None:
             return
         signals.record(t, state, measured, command, controller.pose_errors(state.q))
+        if run.gains is not None and cycle % _GAIN_CYCLES == 0:
+            run.gains.note(controller.law.D)
         if command.events:
             _note_all(run, t, command.events)
         state = advance(plant, data, state, command.torque, cycle)
@@ -292,7 +297,20 @@ def _new_run(controller: Controller, law: str, plant: Plant, cycles: int) -> Run
         signals=Signals(tuple(controller.joints), tuple(controller.tools), sizes, cycles),
         tasks=tasks,
         described=dict(controller.described),
+        gains=_gain_check(controller),
     )
+
+
+def _gain_check(controller: Controller) -> GainCheck | None:
+    """
+    Return the check of a law whose feedback can be compared with the control rate.
+
+    """
+    law = getattr(controller, "law", None)
+    if law is None or not law.has_shares:
+        return None
+    delay = int(controller.stack_file.tree["robot"]["delay_cycles"])
+    return GainCheck(rate=controller.rate, delay_cycles=delay, error_rate=error_rate(controller.stack))
 
 
 def _start(controller: Controller, tree: Mapping[str, Any]) -> Array:

@@ -7,9 +7,13 @@ What one law did in one rehearsal.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from typing import Any
 
+import numpy as np
+
+from prioritized_tracking.core.sampling import MARGIN, rate_bound
 from prioritized_tracking.offline.signals import Signals
 
 
@@ -47,6 +51,61 @@ class TaskFacts:
 
 
 @dataclass(kw_only=True)
+class GainCheck:
+    """
+    How fast errors decay along a run, against what the rate and the delay carry (core.sampling).
+
+    Attributes
+    ----------
+    rate : float
+        Hz.
+    delay_cycles : int
+        Whole cycles from a joint state to its torque.
+    error_rate : float
+        Largest k_p of a task, 1/s.
+    slowest, fastest : float
+        Smallest and largest decay rate of a velocity error met, 1/s.
+
+    """
+
+    rate: float
+    delay_cycles: int
+    error_rate: float
+    slowest: float = math.inf
+    fastest: float = 0.0
+
+    def note(self, D: Any) -> None:
+        """
+        Take the feedback of one state into account.
+
+        Parameters
+        ----------
+        D : (n, n) array
+            In whitened coordinates, 1/s.
+
+        """
+        rates = np.linalg.eigvalsh(D)
+        self.slowest = min(self.slowest, float(rates[0]))
+        self.fastest = max(self.fastest, float(rates[-1]))
+
+    def figures(self) -> dict[str, float]:
+        """
+        Return the figures for the summary; the audit margin is half of the stability bound.
+
+        """
+        stable = self.rate * rate_bound(self.delay_cycles)
+        used, allowed = self.fastest + self.error_rate, MARGIN * stable
+        return {
+            "velocity_error_decay_min_per_s": self.slowest,
+            "velocity_error_decay_max_per_s": self.fastest,
+            "position_error_decay_max_per_s": self.error_rate,
+            "allowed_per_s": allowed,
+            "stable_per_s": stable,
+            "share_of_allowed": used / allowed,
+        }
+
+
+@dataclass(kw_only=True)
 class Run:
     """
     One law in closed loop.
@@ -70,6 +129,8 @@ class Run:
         "complete", "diverged" or "interrupted".
     computing_s : float
         Time it took to compute, s.
+    gains : GainCheck or None
+        None: the law has no feedback of this form.
 
     """
 
@@ -84,3 +145,4 @@ class Run:
     events: list[Event] = field(default_factory=list)
     ended: str = "complete"
     computing_s: float = 0.0
+    gains: GainCheck | None = None

@@ -103,6 +103,7 @@ def summarise_run(run: Run, *, settle: float) -> dict[str, Any]:
         "share_sum": {"min": _least(signals["share_sum"]), "max": _largest(signals["share_sum"])},
         "branches": {"mean": _mean(signals["branches"]), "max": _largest(signals["branches"])},
         "torque": {name: _torque_figures(run, i, window) for i, name in enumerate(signals.joints)},
+        "gains": None if run.gains is None else run.gains.figures(),
         "saturated_longest_s": _longest(signals["limited"] > 0.0) / run.rate,
         "joints": {name: _joint_figures(run, i) for i, name in enumerate(signals.joints)},
         "events": [{"t": event.t, "kind": event.kind, "text": event.text} for event in run.events],
@@ -220,6 +221,7 @@ def _task_figures(run: Run, name: str, facts: TaskFacts, window: NDArray[np.bool
     signals = run.signals
     error, share = np.abs(signals[f"{name}.error"]), signals[f"{name}.share"]
     counted = (signals[f"{name}.validity"] >= 1.0) & (share > 0.0)
+    inertia = signals[f"{name}.apparent_inertia"]
     exceeded = False
     if facts.tolerance is not None:
         exceeded = bool((error[counted & window] > np.asarray(facts.tolerance, dtype=float)).any())
@@ -234,7 +236,9 @@ def _task_figures(run: Run, name: str, facts: TaskFacts, window: NDArray[np.bool
         "tolerance_exceeded": exceeded,
         "share_min": _least(share),
         "share_max": _largest(share),
-        "apparent_inertia_max": _largest(signals[f"{name}.apparent_inertia"]),
+        # of the cycles in which the task owned something
+        "apparent_inertia_min": _least(inertia[np.isfinite(inertia)]),
+        "apparent_inertia_max": _largest(inertia[np.isfinite(inertia)]),
         "handover": facts.handover,
     }
 

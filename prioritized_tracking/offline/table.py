@@ -67,7 +67,7 @@ def tasks_table(figures: Mapping[str, Any], *, width: int) -> str:
                 number(task["error_max"]),
                 number(task["error_rms"]),
                 f"{number(task['share_min'])} … {number(task['share_max'])}",
-                f"to {number(task['apparent_inertia_max'])}",
+                _range(task["apparent_inertia_min"], task["apparent_inertia_max"]),
                 _MISSING if band is None else f"{number(band[0])} … {number(band[1])}",
             ]
         )
@@ -102,6 +102,10 @@ def _law_column(figures: Mapping[str, Any]) -> dict[str, str]:
         margins = [joint["margin_rad"] for joint in joints if joint["unit"] == unit]
         known = [margin for margin in margins if margin is not None]
         column[f"nearest joint limit, {unit}"] = number(min(known)) if known else _MISSING
+    gains = figures["gains"]
+    column["gains, % of what the rate allows"] = (
+        number(100.0 * gains["share_of_allowed"]) if gains else _MISSING
+    )
     column["sum of shares"] = _range(shares["min"], shares["max"])
     column["speed, times real time"] = number(figures["compute_ratio"])
     return column

@@ -14,7 +14,7 @@ import pytest
 
 from prioritized_tracking.errors import InputError
 from prioritized_tracking.offline import table
-from prioritized_tracking.offline.run import Event, Run, TaskFacts
+from prioritized_tracking.offline.run import Event, GainCheck, Run, TaskFacts
 from prioritized_tracking.offline.signals import Signals
 from prioritized_tracking.offline.summary import json_ready, summarise, summarise_run, to_json
 
@@ -372,3 +372,15 @@ def test_a_sliding_joint_is_measured_in_metres():
     text = table.laws_table({"prioritized": summary}, width=100)
     assert "nearest joint limit, rad" in text
     assert "nearest joint limit, m " in text
+
+
+def test_gain_check_compares_the_fastest_decay_with_the_rate():
+    """Half of 2 sin(π/(2(2d+1))) per period is allowed; d = 1 at 1 kHz: 500 1/s."""
+    check = GainCheck(rate=1000.0, delay_cycles=1, error_rate=8.0)
+    for fastest in (100.0, 242.0, 30.0):
+        check.note(np.diag([7.0, fastest]))
+    figures = check.figures()
+    assert figures["velocity_error_decay_min_per_s"] == pytest.approx(7.0)
+    assert figures["velocity_error_decay_max_per_s"] == pytest.approx(242.0)
+    assert figures["allowed_per_s"] == pytest.approx(500.0)
+    assert figures["share_of_allowed"] == pytest.approx(0.5)
