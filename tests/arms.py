@@ -16,7 +16,7 @@ from pathlib import Path
 import numpy as np
 from scipy.spatial.transform import Rotation
 
-from prioritized_tracking.core.arm import Arm, build_arm
+from prioritized_tracking.core.arm import Arm, build_arm, dynamics, frame_motion, inertia
 
 # ---- planar chains ---------------------------------------------------------------------------------
 
@@ -236,3 +236,32 @@ def random_states(arm: Arm, count: int, seed: int = 0) -> list[tuple[np.ndarray,
     low = np.where(np.isfinite(arm.lower), arm.lower, -np.pi)
     high = np.where(np.isfinite(arm.upper), arm.upper, np.pi)
     return [(rng.uniform(low, high), rng.uniform(-2.0, 2.0, arm.n)) for _ in range(count)]
+
+
+# ---- the model at a state ------------------------------------------------------------------------------
+
+EXACT = 1e-11  # relative: two implementations of the same sums
+
+
+def motion(arm, q, frame, base, v=None):
+    """
+    Return R, p, J and the data after `dynamics` (with v) or `inertia`.
+
+    """
+    data = arm.data()
+    R, p, J = np.zeros((3, 3)), np.zeros(3), np.zeros((6, arm.n))
+    if v is None:
+        inertia(arm, data, q)
+    else:
+        dynamics(arm, data, q, v)
+    frame_motion(arm, data, arm.frame_id(frame), arm.frame_id(base), R, p, J)
+    return R, p, J, data
+
+
+def close(ours, theirs, scale=None):
+    """
+    Compare relative to the largest entry.
+
+    """
+    size = max(float(np.abs(theirs).max(initial=0.0)), 1e-3) if scale is None else scale
+    np.testing.assert_allclose(ours, theirs, rtol=0.0, atol=EXACT * size)

@@ -102,6 +102,33 @@ def test_rehearse_writes_its_results_and_says_pass(command, folder):
         assert tuple(stored["joints"]) == ("shoulder", "elbow")
 
 
+def test_a_refused_run_leaves_a_folder_that_can_be_used(command, folder):
+    """Refused at the start of the first law, when the stack is in the folder already; then repaired."""
+    words = ("rehearse", "STACK", "--out", folder / "out", "--seconds", 0.02)
+    code, _, errors = command(*words, "--set", "plant.start=[0.5, 0.5]")
+    assert code == 2
+    assert "starts away" in errors
+    code, _, errors = command(*words)
+    assert code == 0, errors
+
+
+def test_a_note_is_said_once(command, folder):
+    """Also a warning about the file, and what is said of a path (here: that it is ramped in time)."""
+    path, stack = folder / "reach_limit.csv", folder / "planar_stack.yaml"
+    header, *rows = path.read_text().splitlines()
+    path.write_text("\n".join([header, *rows[60:-60]]))
+    text = stack.read_text()
+    stack.write_text(text[: text.index("      stretch: {")] + "      stretch: {kind: joints, source: hold}\n")
+    changes = ("robot.velocity_cutoff=100.0", "guard.start_position=0.99", "guard.start_angle=3.1")
+    words = [word for change in changes for word in ("--set", change)]
+    code, text, errors = command("rehearse", "STACK", "--out", folder / "out", "--seconds", 0.02, *words)
+    assert code in (0, 1), errors
+    notes = summary_of(folder / "out")["notes"]
+    assert any("velocity_cutoff" in note for note in notes)
+    assert any("ramped" in note for note in notes)
+    assert text.count("note: ") == len(notes) == len(set(notes))
+
+
 def test_same_seed_same_numbers(command, folder):
     words = ("--seconds", 0.2, "--set", "plant.mass_error=0.1", "--set", "plant.position_noise=1e-5")
     summaries = []
@@ -279,6 +306,14 @@ def test_companion_refuses_unsuitable_files(command, folder, out, words):
     assert code == 2
     assert words in errors
     assert (folder / "reach_limit.csv").read_bytes() == before
+
+
+def test_companion_leaves_a_device_alone(command, folder):
+    os.mkfifo(folder / "pipe")
+    code, _, errors = command("companion", "STACK", "--out", folder / "pipe")
+    assert code == 2
+    assert "no regular file" in errors
+    assert (folder / "pipe").is_fifo()
 
 
 def test_companion_of_an_unknown_channel(command, folder):

@@ -20,6 +20,7 @@ from prioritized_tracking.files import (
     read_joints_csv,
     read_pose_csv,
     read_text,
+    whole_file,
     write_joints_csv,
     write_pose_csv,
     write_text,
@@ -335,11 +336,35 @@ def test_files_that_cannot_be_written(tmp_path, target):
     assert list(tmp_path.iterdir()) == [tmp_path / "folder"]
 
 
+def test_what_is_no_regular_file_is_left_alone(tmp_path):
+    """A file moved over a device (here a pipe; as the superuser also /dev/null) would take its place."""
+    pipe = tmp_path / "pipe"
+    os.mkfifo(pipe)
+    problem = problems(write_joints_csv, pipe, [0.0], ("a",), [[0.0]])[0]
+    assert "cannot be written" in problem.what
+    assert pipe.is_fifo()
+    assert list(tmp_path.iterdir()) == [pipe]
+
+
 def test_writing_replaces_the_whole_file(tmp_path):
     path = tmp_path / "a.txt"
     write_text(path, "long text\n" * 100)
     write_text(path, "r\u00f6hre\r\n")
     assert path.read_bytes() == "r\u00f6hre\r\n".encode()
+    assert list(tmp_path.iterdir()) == [path]
+
+
+def test_two_processes_may_write_one_file(tmp_path, monkeypatch):
+    """As two rehearsals that compute the same companion: each moves its own draft, whole, into place."""
+    path = tmp_path / "a.txt"
+    with whole_file(path) as mine:
+        mine.write(b"mine, begun first, ")
+        with monkeypatch.context() as other:
+            other.setattr("os.getpid", lambda: -1)
+            write_text(path, "theirs")
+        assert path.read_text() == "theirs"
+        mine.write(b"ended last")
+    assert path.read_text() == "mine, begun first, ended last"
     assert list(tmp_path.iterdir()) == [path]
 
 

@@ -71,6 +71,7 @@ ONE_FAULT: list[tuple[Change, str, str, str]] = [
     (("[60.0, 600.0]", "[600.0, 60.0]"), "tasks.seam_radius.handover", "the band does not rise", "[600, 60]"),
     (("[60.0, 600.0]", "[60.0, 60.0]"), "tasks.seam_radius.handover", "the band does not rise", "[60, 60]"),
     (("[60.0, 600.0]", "[0.0, 60.0]"), "tasks.seam_radius.handover", "out of range", "greater than 0"),
+    (("[60.0, 600.0]", "[60.0, 1.0e17]"), "tasks.seam_radius.handover", "out of range", "less than 1000000000"),
     (("[60.0, 600.0]", "[60.0]"), "tasks.seam_radius.handover", "wrong length", "of length 2"),
     (("rate: 1000.0", "rate: 0.0"), "rate", "out of range", "at least 50"),
     (("pace: 1.0", "pace: 0.001"), "references.weld.pace", "out of range", "at least 0.01"),
@@ -103,6 +104,7 @@ ONE_FAULT: list[tuple[Change, str, str, str]] = [
     (("reference: weld\n        stiffness: 960.0", "reference: elbow\n        stiffness: 960.0"), "tasks.seam_radius.reference", "chart cylinder needs a channel of kind pose", ""),
     (("base: base_link\n", "base: table\n"), "tasks.seam_radius.base", "task and reference have different bases", "'table', and 'base_link'"),
     ((f"weld: {WELD}", f"weld: {WELD}\n      spare: {{kind: pose, source: hold}}"), "references.spare", "channel is not used", "Use it"),
+    (("sequence: zyz, frame: tool", "sequence: zyz, frame: wrist_link"), "tasks.tool_zyz.frame", "channel 'weld' moves two frames", "'tool' and 'wrist_link'"),
     (("kind: pose,", "kind: joint,"), "references.weld.kind", "unknown choice", "Did you mean 'joints'?"),
     ((WELD, WELD[:-1] + ", follows: elbow}"), "references.weld.follows", "a pose channel follows nobody", "Only a joints"),
     ((ELBOW, "{kind: joints, source: companion}"), "references.elbow.follows", "missing", "the pose channel"),
@@ -202,6 +204,20 @@ def test_a_second_posture_is_refused(tmp_path: Path) -> None:
     second = "\n      rest: {chart: posture, reference: elbow}"
     found = problems(tmp_path, (POSTURE, POSTURE + second), (PRIORITY, PRIORITY[:-1] + ", rest]"))
     assert [problem.what for problem in found] == ["posture 'posture' is not last"]
+
+
+def test_one_pose_drives_one_frame(tmp_path: Path) -> None:
+    spare = "\n      spare: {kind: pose, source: hold}"
+    changes = [
+        (f"weld: {WELD}", f"weld: {WELD}{spare}"),
+        ("zyz, frame: tool, reference: weld", "zyz, frame: tool, reference: spare"),
+    ]
+    (problem,) = problems(tmp_path, *changes)
+    assert problem.what == "frame 'tool' has two channels"
+    assert problem.got == "'weld' and 'spare'"
+    assert problem.where.endswith(" tasks.tool_zyz.reference")
+    other = ("zyz, frame: tool, reference: weld", "zyz, frame: flange, reference: spare")
+    assert problems(tmp_path, changes[0], other) == ()
 
 
 def test_a_circle_of_channels_is_said_once(tmp_path: Path) -> None:

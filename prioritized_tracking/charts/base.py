@@ -37,7 +37,7 @@ class ChartWork:
 
     def __init__(
         self, x: Array, x_d: Array, x_dot_d: Array, rows: Array, rows_d: Array, rate: Array, rate_d: Array
-    ):
+    ) -> None:
         self.x, self.x_d, self.x_dot_d = x, x_d, x_dot_d
         self.rows, self.rows_d, self.rate, self.rate_d = rows, rows_d, rate, rate_d
 

@@ -43,10 +43,15 @@ def spread_configurations(arm: Arm, count: int = SAMPLES) -> Array:
     """
     Joint positions (count, n), rad: the first points of an unscrambled Sobol sequence inside the limits.
 
+    The axes of the sequence go with the joints as the model numbers them, root to tip: in whatever order
+    commands come, a band is the same.
+
     """
     lower = np.where(np.isfinite(arm.lower), arm.lower, -UNLIMITED)
     upper = np.where(np.isfinite(arm.upper), arm.upper, UNLIMITED)
-    points = qmc.Sobol(d=arm.n, scramble=False).random(count)
+    order = slice(None) if arm.built.order is None else arm.built.order
+    points = np.empty((count, arm.n))
+    points[:, order] = qmc.Sobol(d=arm.n, scramble=False).random(count)
     positions: Array = lower + points * (upper - lower)
     return positions
 

@@ -86,6 +86,14 @@ class References:
         self._push = (0.0, 0.0, t)
         self.active = True
 
+    def deactivate(self) -> None:
+        """
+        Forget where holds were made.
+
+        """
+        self._paths = {name: channel.path for name, channel in self.channels.items()}
+        self.active = False
+
     def start(self, t: float, *, only_at_activation: bool = False) -> None:
         """
         Begin, or go on. A path at its beginning is at rest and sets out at once; else its rate ramps up.

@@ -14,6 +14,9 @@ import numpy as np
 from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 
+#: No joint is at so many radians, or that fast (rad/s); a message with such a number is damaged.
+HUGE = 1e6
+
 
 @dataclass(slots=True, eq=False)
 class TaskReport:
@@ -86,6 +89,15 @@ class Command:
 
 
 @compiled
+def usable(values: Array) -> bool:
+    """
+    Whether all joint positions or velocities are finite and below ``HUGE``.
+
+    """
+    return bool((np.abs(values) < HUGE).all())
+
+
+@compiled
 def limit_torque(feed_forward: Array, feedback: Array, limit: Array) -> tuple[Array, bool]:
     """
     Scale the feedback until the torque fits; only if the feed-forward alone does not, clip it.
@@ -103,10 +115,10 @@ def limit_torque(feed_forward: Array, feedback: Array, limit: Array) -> tuple[Ar
     total = feed_forward + feedback
     if (np.abs(total) <= limit).all():
         return total, False
-    base = np.minimum(np.maximum(feed_forward, -limit), limit)
     scale = 1.0
     for k in range(limit.shape[0]):
-        room = limit[k] - base[k] if feedback[k] > 0.0 else limit[k] + base[k]
-        if abs(feedback[k]) * scale > room:
-            scale = room / abs(feedback[k])
-    return np.minimum(np.maximum(base + scale * feedback, -limit), limit), True
+        # feedback that pulls a feed-forward back inside has the whole range to do so
+        room = limit[k] - feed_forward[k] if feedback[k] > 0.0 else limit[k] + feed_forward[k]
+        if abs(feedback[k]) * scale > max(room, 0.0):
+            scale = max(room, 0.0) / abs(feedback[k])
+    return np.minimum(np.maximum(feed_forward + scale * feedback, -limit), limit), True

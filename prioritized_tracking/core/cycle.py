@@ -10,7 +10,6 @@ an argument.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable, Mapping
 from typing import Any
 
@@ -18,7 +17,8 @@ import numpy as np
 
 from prioritized_tracking.core.arm import Arm, ArmData, dynamics, frame_motion, inertia
 from prioritized_tracking.core.channels import Channel, References, Samples
-from prioritized_tracking.core.command import Command, limit_torque
+from prioritized_tracking.core.claims import Room
+from prioritized_tracking.core.command import HUGE, Command, limit_torque, usable
 from prioritized_tracking.core.kernel import TWIN_STEP, Outcome
 from prioritized_tracking.core.laws import LAWS, Law
 from prioritized_tracking.core.references import JointHold, PoseHold
@@ -45,6 +45,7 @@ class Controller:
     ----------
     joints : names in command order.
     tools : for each controlled frame (frame, base, channel) numbers and name.
+    described : for each controlled frame the units of its tasks, "m" and "rad": what of its pose counts.
     stack_file : the file it was built from; None: built by hand.
     notes : what the user should be told about it.
 
@@ -74,6 +75,9 @@ class Controller:
             for task in reversed(stack.tasks)
             if task.chart.kind == "pose"
         }
+        self.described = {
+            frame: frozenset(task.unit for task in stack.tasks if task.frame == frame) for frame in self.tools
+        }
         self.names = tuple(t.name for t in stack.tasks) + ((stack.posture.name,) if stack.posture else ())
         ends = (*stack.first_row, stack.first_row[-1] + arm.n)
         self._blocks = tuple((name, slice(*ends[i : i + 2])) for i, name in enumerate(self.names))
@@ -81,6 +85,14 @@ class Controller:
         self._data: ArmData = arm.data()
         self._references = References(channels)
         self._samples: Samples = {}
+
+    @property
+    def room(self) -> Room:
+        """
+        Arrays of the last evaluation; the next one overwrites them.
+
+        """
+        return self._here.room
 
     @property
     def duration(self) -> float:
@@ -114,10 +126,10 @@ class Controller:
         self._samples = references.at(t)
         starts = {name: self._samples[name].q for name, c in self.channels.items() if c.kind == "joints"}
         problems = state_problems(self.arm, q, v)
-        problems += tool_problems(self.pose_errors(q), self.start_limits)
+        problems += tool_problems(self.pose_errors(q), self.described, self.start_limits)
         problems += joint_problems(self.arm, q, starts, self.start_limits)
         if problems:
-            references.active = False
+            references.deactivate()
             raise InputError(problems)
         if any(channel.at_activation for channel in self.channels.values()):
             references.start(t, only_at_activation=True)
@@ -195,6 +207,25 @@ class Controller:
         outcome = self._law(q, v, self._references.at_path_time(t, self._holder(q)), 1.0)
         return self._command(outcome.feed_forward + outcome.feedback, False)
 
+    def survey(self, t: float, q: Array) -> tuple[Evaluation, Law]:
+        """
+        Shares, feedback and reference velocity at any joint positions and path time, without torque.
+
+        Parameters
+        ----------
+        t, q : as for ``evaluate``.
+
+        Returns
+        -------
+        here, law : arrays that the next call overwrites.
+
+        """
+        here = self._here
+        inertia(self.arm, here.data, q)
+        here.update(q, self._references.at_path_time(t, self._holder(q)))
+        self.law.survey(here)
+        return here, self.law
+
     def rehearse_one_cycle(self) -> None:
         """
         Go through everything a cycle needs, at the start of the references, without sending anything.
@@ -205,6 +236,8 @@ class Controller:
         outcome = self._law(q, np.zeros_like(q), self._samples, 1.0)
         self._command(limit_torque(outcome.feed_forward, outcome.feedback, self._torque_limit)[0], False)
         self.pose_errors(q)
+        if self.law.has_shares:
+            self.survey(0.0, q)
 
     def _law(self, q: Array, v: Array, samples: Samples, push_scale: float) -> Outcome:
         """
@@ -304,17 +337,18 @@ class Controller:
         """
         q, v = np.ascontiguousarray(q, dtype=np.float64), np.ascontiguousarray(v, dtype=np.float64)
         shape = (self.arm.n,)
-        if q.shape != shape or v.shape != shape or not math.isfinite(q @ q + v @ v):
+        if q.shape != shape or v.shape != shape or not (usable(q) and usable(v)):
             raise InputError(
                 [
                     Problem(
                         what=f"joint {name} cannot be used",
-                        expected=f"{self.arm.n} finite numbers ({unit}) for {', '.join(self.joints)}",
+                        expected=f"{self.arm.n} numbers ({unit}), finite and below {HUGE:g}: "
+                        + ", ".join(self.joints),
                         got=f"shape {array.shape}, {np.array2string(array, threshold=14)}",
                         remedy="Check the joint state's names and lengths.",
                     )
                     for name, unit, array in (("positions", "rad", q), ("velocities", "rad/s", v))
-                    if array.shape != shape or not math.isfinite(np.square(array).sum())
+                    if array.shape != shape or not usable(array)
                 ]
             )
         return q, v

@@ -125,18 +125,19 @@ def small_inverse(G: Array, out: Array) -> float:
         return float(out[0, 0])
     if k > 3:
         return np.inf
-    a, b, d = G[0, 0], G[0, 1], G[1, 1]
+    a, b, d, f = G[0, 0], G[0, 1], G[1, 1], G[k - 1, k - 1]
     if k == 2:
         determinant = a * d - b * b
         out[0, 0], out[0, 1], out[1, 0], out[1, 1] = d, -b, -b, a
     else:
-        c, e, f = G[0, 2], G[1, 2], G[2, 2]
+        c, e = G[0, 2], G[1, 2]
         p, q, r = d * f - e * e, c * e - b * f, b * e - c * d
         determinant = a * p + b * q + c * r
         out[0, 0], out[0, 1], out[0, 2] = p, q, r
         out[1, 0], out[1, 1], out[1, 2] = q, a * f - c * c, b * c - a * e
         out[2, 0], out[2, 1], out[2, 2] = r, b * c - a * e, a * d - b * b
-    if not determinant > 1e-12 * a * d:  # beyond this the cofactors cancel
+    size = a + d + (f if k == 3 else 0.0)
+    if not determinant > 1e-7 * size**k:  # cofactors cancel: the error is some 1e-16 size**k/determinant
         return np.inf
     out /= determinant
     return math.sqrt((out * out).sum())

@@ -16,13 +16,14 @@ from typing import Any, ClassVar
 import numpy as np
 
 from prioritized_tracking.core.arm import Arm
-from prioritized_tracking.core.branches import allocate_branches
+from prioritized_tracking.core.branches import allocate_branches, blend
 from prioritized_tracking.core.kernel import (
     TWIN_STEP,
     allocate_outcome,
     inverse_dynamics,
     prepare,
     prioritized_torque,
+    reference_velocity,
 )
 from prioritized_tracking.core.rotation import Array, rotation_log
 from prioritized_tracking.core.stack import Evaluation, Stack, decay_rate
@@ -55,6 +56,7 @@ class Law:
     name : value of the parameter ``law``.
     rehearsal_only : never to be run on hardware.
     tracks : uses the twin.
+    has_shares : blends hierarchies, so that its tasks have shares.
     outcome : filled by ``torque``; see `kernel.Outcome`.
     velocity : (n,) q̇_r, rad/s.
     branches, pruned : how many exact hierarchies were blended, and whether there were too many.
@@ -64,6 +66,7 @@ class Law:
     name: ClassVar[str]
     rehearsal_only: ClassVar[bool] = False
     tracks: ClassVar[bool] = True
+    has_shares: ClassVar[bool] = False
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
         self.outcome = allocate_outcome(arm.n, len(stack.tasks))
@@ -98,6 +101,18 @@ class Law:
         """
         raise NotImplementedError
 
+    def survey(self, here: Evaluation) -> None:
+        """
+        Fill ``velocity`` and the shares and feedback of ``outcome``, without torque and twin.
+
+        Raises
+        ------
+        InputError
+            The state has no solution.
+
+        """
+        raise NotImplementedError(f"law {self.name} has no shares")
+
     def prepare(self, here: Evaluation, nominal: Evaluation | None = None) -> None:
         """
         Form the claims of an evaluation and factorise its inertia matrix.
@@ -125,6 +140,7 @@ class Prioritized(Law):
     """
 
     name = "prioritized"
+    has_shares = True
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
         super().__init__(arm, stack)
@@ -150,6 +166,24 @@ class Prioritized(Law):
             self._floor,
             self.outcome,
         )
+        self._take(here, count)
+
+    def survey(self, here: Evaluation) -> None:
+        """
+        See :meth:`Law.survey`.
+
+        """
+        room, outcome = here.room, self.outcome
+        count, self.pruned = reference_velocity(self.layout, self._gains, room, room, self._branches, False)
+        blend(self._branches, count, outcome.report, outcome.D, outcome.push)
+        outcome.D[np.diag_indices_from(outcome.D)] += self._floor
+        self._take(here, count)
+
+    def _take(self, here: Evaluation, count: int) -> None:
+        """
+        Note the number of branches; 0 means that the state has no solution.
+
+        """
         if count == 0:
             raise unsolvable()
         self.branches = count

@@ -7,7 +7,7 @@ What must be true of an arm before a controller may be activated.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -68,25 +68,34 @@ def state_problems(arm: Arm, q: Array, v: Array) -> list[Problem]:
     return problems
 
 
-def tool_problems(errors: Mapping[str, tuple[float, float]], limits: StartLimits) -> list[Problem]:
+def tool_problems(
+    errors: Mapping[str, tuple[float, float]], described: Mapping[str, Collection[str]], limits: StartLimits
+) -> list[Problem]:
     """
-    Frames whose reference starts elsewhere.
+    Frames whose reference starts elsewhere, in what their tasks describe of them.
 
     Parameters
     ----------
     errors : distance (m) and angle (rad) of each frame from its reference.
+    described : units of its tasks, "m" and "rad": an orientation no task is about may be any.
 
     """
-    return [
-        Problem(
-            what=f"the reference starts away from {frame}",
-            expected=f"at most {limits.position:g} m and {limits.angle:g} rad apart",
-            got=f"{distance:.4g} m and {angle:.4g} rad",
-            remedy="Move the arm to the start of the path first.",
-        )
-        for frame, (distance, angle) in errors.items()
-        if distance > limits.position or angle > limits.angle
-    ]
+    problems = []
+    for frame, (distance, angle) in errors.items():
+        checks = (("m", distance, limits.position), ("rad", angle, limits.angle))
+        counted = [check for check in checks if check[0] in described[frame]]
+        if any(error > limit for _, error, limit in counted):
+            problems.append(
+                Problem(
+                    what=f"the reference starts away from {frame}",
+                    expected="at most "
+                    + " and ".join(f"{limit:g} {unit}" for unit, _, limit in counted)
+                    + " apart",
+                    got=" and ".join(f"{error:.4g} {unit}" for unit, error, _ in counted),
+                    remedy="Move the arm to the start of the path first.",
+                )
+            )
+    return problems
 
 
 def joint_problems(arm: Arm, q: Array, references: Mapping[str, Array], limits: StartLimits) -> list[Problem]:

@@ -8,12 +8,13 @@ Files of references: CSV tables of poses and joint positions, and plain text, wi
 from __future__ import annotations
 
 from .tables import read_joints_csv, read_pose_csv, write_joints_csv, write_pose_csv
-from .text_files import read_text, write_text
+from .text_files import read_text, whole_file, write_text
 
 __all__ = [
     "read_joints_csv",
     "read_pose_csv",
     "read_text",
+    "whole_file",
     "write_joints_csv",
     "write_pose_csv",
     "write_text",

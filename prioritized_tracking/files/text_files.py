@@ -1,15 +1,19 @@
 # Copyright 2026 The prioritized_tracking contributors
 # SPDX-License-Identifier: Apache-2.0
 """
-Text files of the user: read with every refusal named, written whole or not at all.
+Files of the user: text read with every refusal named, anything written whole or not at all.
 
 """
 
 from __future__ import annotations
 
+import contextlib
+import errno
 import os
 import stat
+from collections.abc import Iterator
 from pathlib import Path
+from typing import IO
 
 from prioritized_tracking.errors import InputError, Problem, nearest
 
@@ -130,7 +134,7 @@ def place_of(path: str | os.PathLike[str], where: str, line: int = 0, column: st
 
 def write_text(path: str | os.PathLike[str], text: str) -> None:
     """
-    Write a text file beside its place and move it there, so that no half file is ever seen.
+    Write a text file, whole or not at all, see `whole_file`.
 
     Parameters
     ----------
@@ -145,14 +149,28 @@ def write_text(path: str | os.PathLike[str], text: str) -> None:
         When it cannot be written.
 
     """
-    target = Path(path)
-    temporary = target.with_name(f".{target.name}.part")
     try:
-        try:
-            temporary.write_text(text, encoding="utf-8", newline="")
-            temporary.replace(target)
-        except BaseException:
-            temporary.unlink(missing_ok=True)
-            raise
+        with whole_file(Path(path)) as file:
+            file.write(text.encode("utf-8"))
     except (OSError, ValueError) as error:
-        raise InputError(unusable("the file cannot be written", str(target), error)) from None
+        raise InputError(unusable("the file cannot be written", str(path), error)) from None
+
+
+@contextlib.contextmanager
+def whole_file(path: Path) -> Iterator[IO[bytes]]:
+    """
+    Open a file for writing so that an interruption leaves the old one or the new one, never half of it.
+
+    The draft beside it is this process's own: another one may be writing the same file. What is there but
+    no regular file is left alone: moved over a device, the file would take its place for good.
+
+    """
+    if path.exists() and not path.is_file():
+        raise OSError(errno.EINVAL, "not a regular file", str(path))
+    draft = path.with_name(f".{path.name}.{os.getpid()}.part")
+    try:
+        with draft.open("wb") as file:
+            yield file
+        os.replace(draft, path)
+    finally:
+        draft.unlink(missing_ok=True)

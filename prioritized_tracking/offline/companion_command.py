@@ -99,6 +99,8 @@ def _target_problems(target: Path) -> list[Problem]:
         folder = target.parent
         if target.is_dir():
             what = "the file to write is a folder"
+        elif target.exists() and not target.is_file():
+            what = "the file to write is no regular file"
         elif not folder.is_dir():
             what = f"there is no folder {folder}"
         elif not os.access(target if target.exists() else folder, os.W_OK):

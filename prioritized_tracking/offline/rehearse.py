@@ -64,6 +64,7 @@ class Controller(Protocol):
     stack_file: Any
     stack: Any
     tools: Mapping[str, Any]
+    described: Mapping[str, frozenset[str]]
     channels: Mapping[str, Any]
 
     def activate(self, t: float, q: Array, v: Array) -> Any: ...
@@ -290,10 +291,7 @@ def _new_run(controller: Controller, law: str, plant: Plant, cycles: int) -> Run
         planned_s=cycles / controller.rate,
         signals=Signals(tuple(controller.joints), tuple(controller.tools), sizes, cycles),
         tasks=tasks,
-        described={
-            frame: frozenset(task.unit for task in stack.tasks if task.frame == frame)
-            for frame in controller.tools
-        },
+        described=dict(controller.described),
     )
 
 

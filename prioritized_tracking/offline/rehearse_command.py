@@ -9,22 +9,24 @@ from __future__ import annotations
 
 import shutil
 from collections.abc import Mapping, Sequence
+from fnmatch import fnmatch
 from pathlib import Path
 from typing import Any
 
 import prioritized_tracking as pt
 from prioritized_tracking import compiled
 from prioritized_tracking.errors import InputError, Problem, nearest
+from prioritized_tracking.files import whole_file
 from prioritized_tracking.offline.overrides import parse_overrides
 from prioritized_tracking.offline.progress import cycle_bar, fraction_bar
 from prioritized_tracking.offline.rehearse import SETTLE_S, default_seconds, rehearse
 from prioritized_tracking.offline.run import Run
-from prioritized_tracking.offline.signals import whole_file
 from prioritized_tracking.offline.summary import summarise, to_json
 from prioritized_tracking.offline.table import laws_table, tasks_table
 
 SUMMARY = "summary.json"
 STACK = "stack.yaml"
+SIGNALS = "signals_{}.npz"
 
 _CODES = {"pass": 0, "fail": 1, "interrupted": 130}
 
@@ -132,19 +134,24 @@ def folder_problem(folder: Path) -> Problem | None:
     """
     Return what speaks against a results folder; it is neither made nor changed.
 
-    A folder that holds anything but the results of an earlier rehearsal is refused, so that a slip of the
-    pen does not scatter files over someone's work.
+    A folder that holds other files than a rehearsal's is refused, so that a slip of the pen does not scatter
+    files over someone's work. A rehearsal that was refused or killed leaves a part of its files.
 
     """
     where, remedy = f"--out {folder}", "Name a new folder, an empty one, or that of an earlier rehearsal."
     try:
         if folder.exists() and not folder.is_dir():
             return Problem(what="the results folder is a file", where=where, remedy=remedy)
-        if folder.is_dir() and any(folder.iterdir()) and not (folder / SUMMARY).is_file():
+        finished = (folder / SUMMARY).is_file()
+        if folder.is_dir() and not finished and not all(_is_ours(path.name) for path in folder.iterdir()):
             return Problem(what="the results folder holds other files", where=where, remedy=remedy)
     except (OSError, ValueError) as error:
         return _unusable(where, error)
     return None
+
+
+def _is_ours(name: str) -> bool:
+    return name == STACK or fnmatch(name, SIGNALS.format("*"))
 
 
 def _prepare(folder: Path, stack_text: str) -> None:
@@ -154,7 +161,7 @@ def _prepare(folder: Path, stack_text: str) -> None:
     """
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        for old in (*folder.glob("signals_*.npz"), folder / SUMMARY):
+        for old in (*folder.glob(SIGNALS.format("*")), folder / SUMMARY):
             old.unlink(missing_ok=True)
         with whole_file(folder / STACK) as file:
             file.write(stack_text.encode())
@@ -181,7 +188,7 @@ def _run_all(controllers: Mapping[str, Any], folder: Path, seconds: float) -> tu
 
     def finished(run: Run) -> None:
         runs.append(run)
-        run.signals.save(folder / f"signals_{run.law}.npz")
+        run.signals.save(folder / SIGNALS.format(run.law))
 
     try:
         rehearse(

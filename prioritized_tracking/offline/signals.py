@@ -28,16 +28,15 @@ Names and shapes in a stored file, N cycles of n joints, a task of m coordinates
 
 from __future__ import annotations
 
-import contextlib
-import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from pathlib import Path
-from typing import IO, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from prioritized_tracking.errors import InputError, Problem
+from prioritized_tracking.files import whole_file
 
 Array = NDArray[np.float64]
 
@@ -168,21 +167,6 @@ class Signals:
         arrays: dict[str, Any] = {"joints": np.array(self.joints)} | {name: self[name] for name in self.names}
         with whole_file(path) as file:
             np.savez(file, **arrays)
-
-
-@contextlib.contextmanager
-def whole_file(path: Path) -> Iterator[IO[bytes]]:
-    """
-    Open a file for writing so that an interruption leaves the old one or the new one, never half of it.
-
-    """
-    draft = path.with_name(f".{path.name}.part")
-    try:
-        with draft.open("wb") as file:
-            yield file
-        os.replace(draft, path)
-    finally:
-        draft.unlink(missing_ok=True)
 
 
 def _columns(n: int, frames: tuple[str, ...], tasks: Mapping[str, int]) -> dict[str, int | slice]:

@@ -8,8 +8,7 @@ run):
 
 1. the law ran to the end: no divergence, no torque that is not a number;
 2. every task with a `tolerance` kept each coordinate of its error within it, after `settle`, wherever its
-chart is
-   good (c = 1) and it owns a share;
+   chart is good (c = 1) and it owns a share;
 3. no joint crossed a position limit;
 4. no joint exceeded its speed limit;
 5. no torque limit was active longer than 0.1 s without a break;

@@ -67,7 +67,7 @@ class Outcome:
     feedback : (n, n) matrix in τ = −feedback · s.
     push : (n,) N·m.
     shares : (r + 1,) posture last.
-    leaves : weight and owned directions of each branch.
+    leaves : weight, owned directions and largest owned 1/λ (of each task) of each branch.
 
     """
 
@@ -75,7 +75,7 @@ class Outcome:
     feedback: Array
     push: Array
     shares: Array
-    leaves: list[tuple[float, tuple[int, ...]]] = field(default_factory=list)
+    leaves: list[tuple[float, tuple[int, ...], tuple[float, ...]]] = field(default_factory=list)
 
 
 @dataclass
@@ -86,6 +86,7 @@ class _Branch:
     feedback: Array
     push: Array
     shares: tuple[int, ...]
+    apparent: tuple[float, ...]
 
 
 @dataclass
@@ -101,6 +102,7 @@ class _Walk:
     posture: tuple[Array, Array] | None
     posture_damping: float
     claim_speed: Array
+    with_feedback: bool
     total: Outcome
 
     def limit(self, g: Array, g_0: Array) -> Array:
@@ -137,17 +139,22 @@ class _Walk:
         step = inverse @ ((1 - h) * claim)
         if j:
             step = step + self.limit(inverse @ (h * claim), inverse @ (h * (J_own @ feed_forward)))
-        directions = inverse * np.sqrt(lam)  # M-orthonormal columns
-        weak = self.M @ directions @ np.diag(h) @ directions.T @ self.M * self.posture_damping
-        P = own @ own.T @ JN / (task.c or 1.0)  # c = 0 owns nothing
-        force = task.force if task.force is not None else np.zeros(len(own))
+        feedback, push = branch.feedback, branch.push
+        if self.with_feedback:
+            directions = inverse * np.sqrt(lam)  # M-orthonormal columns
+            weak = self.M @ directions @ np.diag(h) @ directions.T @ self.M * self.posture_damping
+            P = own @ own.T @ JN / (task.c or 1.0)  # c = 0 owns nothing
+            force = task.force if task.force is not None else np.zeros(len(own))
+            feedback = feedback + P.T @ np.diag(task.damping) @ P + weak
+            push = push + JN.T @ own @ own.T @ force
         return _Branch(
             weight,
             branch.N - inverse @ J_own,
             branch.velocity + step,
-            branch.feedback + P.T @ np.diag(task.damping) @ P + weak,
-            branch.push + JN.T @ own @ own.T @ force,
+            feedback,
+            push,
             (*branch.shares, j),
+            (*branch.apparent, float(1 / lam[j - 1]) if j else np.inf),
         )
 
     def close(self, branch: _Branch) -> None:
@@ -158,13 +165,14 @@ class _Walk:
             if left:
                 g, g_0 = branch.N @ (self.posture[0] - velocity), branch.N @ self.posture[1]
                 velocity = velocity + self.limit(g, g_0)
-                feedback = feedback + self.posture_damping * self.M @ branch.N
+                if self.with_feedback:
+                    feedback = feedback + self.posture_damping * self.M @ branch.N
         shares = (*branch.shares, left)
         total.velocity += branch.weight * velocity
         total.feedback += branch.weight * feedback
         total.push += branch.weight * branch.push
         total.shares += branch.weight * np.array(shares)
-        total.leaves.append((branch.weight, shares))
+        total.leaves.append((branch.weight, shares, (*branch.apparent, 1.0 if left else np.inf)))
 
 
 def blended(
@@ -173,6 +181,8 @@ def blended(
     posture: tuple[Array, Array] | None = None,
     posture_damping: float = 0.0,
     claim_speed: Array | None = None,
+    *,
+    with_feedback: bool = True,
 ) -> Outcome:
     """
     All branches, depth first, and their weighted sums.
@@ -184,13 +194,14 @@ def blended(
     posture : (reference velocity, feed-forward), (n,) each, rad/s; None: no posture task.
     posture_damping : 1/s.
     claim_speed : (n,) rad/s; None: no limit.
+    with_feedback : False leaves out feedback and push, which a finite-difference twin does not need.
 
     """
     n = M.shape[0]
     total = Outcome(np.zeros(n), np.zeros((n, n)), np.zeros(n), np.zeros(len(tasks) + 1))
     limit = np.full(n, np.inf) if claim_speed is None else claim_speed
-    walk = _Walk(M, np.linalg.inv(M), tasks, posture, posture_damping, limit, total)
-    walk.visit(0, _Branch(1.0, np.eye(n), np.zeros(n), np.zeros((n, n)), np.zeros(n), ()))
+    walk = _Walk(M, np.linalg.inv(M), tasks, posture, posture_damping, limit, with_feedback, total)
+    walk.visit(0, _Branch(1.0, np.eye(n), np.zeros(n), np.zeros((n, n)), np.zeros(n), (), ()))
     return total
 
 

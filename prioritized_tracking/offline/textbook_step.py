@@ -95,7 +95,7 @@ class TextbookController:
         here, errors = self._reference(q, samples, M, {})
         moved = {name: _moved(sample) for name, sample in samples.items()}
         inertia(arm, data, q + STEP * v)
-        there, _ = self._reference(q + STEP * v, moved, data.M.copy(), errors)
+        there, _ = self._reference(q + STEP * v, moved, data.M.copy(), errors, twin=True)
         velocity = here.velocity
         acceleration = (there.velocity - velocity) / STEP
         friction = arm.viscous * velocity + arm.coulomb * np.tanh(velocity / 0.02)
@@ -104,10 +104,12 @@ class TextbookController:
         return torque if self._gravity_by_driver else torque + g
 
     def _reference(
-        self, q: Array, samples: Samples, M: Array, nominal: Mapping[str, Array]
+        self, q: Array, samples: Samples, M: Array, nominal: Mapping[str, Array], *, twin: bool = False
     ) -> tuple[Outcome, dict[str, Array]]:
         """
-        Reference velocity, feedback and push, and the errors; ``nominal``: those whose turns a twin keeps.
+        Reference velocity, feedback and push, and the errors.
+
+        A twin keeps the turns of the ``nominal`` errors, and needs no feedback.
 
         """
         errors: dict[str, Array] = {}
@@ -123,14 +125,21 @@ class TextbookController:
             tasks.append(TextbookTask(c * J, c * nu, c, task.damping, task.handover, task.force))
         posture = self.stack.posture
         if posture is None:
-            return blended(M, tasks, claim_speed=self.stack.claim_speed), errors
+            return blended(M, tasks, claim_speed=self.stack.claim_speed, with_feedback=not twin), errors
         target = samples[posture.reference]
         error = _error(posture.name, q - target.q, self.arm.continuous, nominal, errors)
         claims = (target.v - posture.k_p * error, target.v)
-        return blended(M, tasks, claims, posture.damping, self.stack.claim_speed), errors
+        limit = self.stack.claim_speed
+        return blended(M, tasks, claims, posture.damping, limit, with_feedback=not twin), errors
 
     def _claim(
-        self, task: Any, R: Array, p: Array, target: Any, nominal: Mapping[str, Array], errors: dict[str, Array]
+        self,
+        task: Any,
+        R: Array,
+        p: Array,
+        target: Any,
+        nominal: Mapping[str, Array],
+        errors: dict[str, Array],
     ) -> tuple[Array, Array, float]:
         """
         Rows, ν_r/c = rate · (ẋ_d − k_p x̃) and c of a pose task.

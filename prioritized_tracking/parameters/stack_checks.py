@@ -51,7 +51,15 @@ def check_stack(tree: Tree, charts: Mapping[str, Any], reading: Reading) -> None
         Takes the problems; knows which keys were given.
 
     """
-    for check in (check_priority, check_posture, check_unused, check_cycles, check_robot, check_loop):
+    for check in (
+        check_priority,
+        check_posture,
+        check_unused,
+        check_tools,
+        check_cycles,
+        check_robot,
+        check_loop,
+    ):
         check(tree, reading)
     for name, task in (tree["tasks"] or {}).items():
         check_task(name, task, tree["references"] or {}, charts, reading)
@@ -113,6 +121,28 @@ def check_unused(tree: Tree, reading: Reading) -> None:
         if name not in used:
             what = "channel is not used: no task has it as reference and no channel follows it"
             reading.report(("references", name), what, remedy="Use it, or remove it.")
+
+
+def check_tools(tree: Tree, reading: Reading) -> None:
+    """
+    Report a frame with two channels, and a channel with two frames: one pose drives all charts of one frame.
+
+    """
+    channels: Tree = tree["references"] or {}
+    channel_of: dict[str, str] = {}
+    frame_of: dict[str, str] = {}
+    for name, task in (tree["tasks"] or {}).items():
+        frame, channel = task.get("frame"), task.get("reference")
+        if frame is None or channels.get(channel, {}).get("kind") != "pose":
+            continue
+        if (first := channel_of.setdefault(frame, channel)) != channel:
+            what, got = f"frame '{frame}' has two channels", f"'{first}' and '{channel}'"
+            remedy = "Let one pose reference drive all charts of the frame."
+            reading.report(("tasks", name, "reference"), what, got=got, remedy=remedy)
+        elif (first := frame_of.setdefault(channel, frame)) != frame:
+            what, got = f"channel '{channel}' moves two frames", f"'{first}' and '{frame}'"
+            remedy = "Give each frame a channel of its own."
+            reading.report(("tasks", name, "frame"), what, got=got, remedy=remedy)
 
 
 def check_task(name: str, task: Tree, channels: Tree, charts: Mapping[str, Any], reading: Reading) -> None:

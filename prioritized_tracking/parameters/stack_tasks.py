@@ -42,6 +42,7 @@ TASK_KEYS = (
         unit="kg or kg·m²",
         length=2,
         low=0.0,
+        high=1e9,  # an apparent inertia of 1e12 and more is rounding, and would be owned
         exclusive=True,
         help="Apparent inertia: full share below the first, none above the second; left out: computed.",
     ),

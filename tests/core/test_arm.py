@@ -17,9 +17,7 @@ from scipy.spatial.transform import Rotation
 
 from prioritized_tracking.core.arm import (
     build_arm,
-    dynamics,
     forward_dynamics,
-    frame_motion,
     inertia,
     inverse_dynamics,
 )
@@ -28,41 +26,16 @@ from tests.arms import (
     all_data_urdfs,
     bare_urdf,
     body,
+    close,
     data_arm,
     data_urdf,
     followers,
     joint,
+    motion,
     planar_arm,
     planar_urdf,
     random_states,
 )
-
-EXACT = 1e-11  # relative: two implementations of the same sums
-
-
-def motion(arm, q, frame, base, v=None):
-    """
-    Return R, p, J and the data after `dynamics` (with v) or `inertia`.
-
-    """
-    data = arm.data()
-    R, p, J = np.zeros((3, 3)), np.zeros(3), np.zeros((6, arm.n))
-    if v is None:
-        inertia(arm, data, q)
-    else:
-        dynamics(arm, data, q, v)
-    frame_motion(arm, data, arm.frame_id(frame), arm.frame_id(base), R, p, J)
-    return R, p, J, data
-
-
-def close(ours, theirs, scale=None):
-    """
-    Compare relative to the largest entry.
-
-    """
-    size = max(float(np.abs(theirs).max(initial=0.0)), 1e-3) if scale is None else scale
-    np.testing.assert_allclose(ours, theirs, rtol=0.0, atol=EXACT * size)
-
 
 # ---- against Pinocchio's own reader ----------------------------------------------------------------
 

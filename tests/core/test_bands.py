@@ -84,6 +84,17 @@ def test_equals_the_naive_definition_on_seven_axes():
     assert seen.total_rank == 6
 
 
+def test_the_order_of_commands_makes_no_difference():
+    """The samples go with the joints of the model, not with the order they are commanded in."""
+    names = [f"panda_joint{i}" for i in range(1, 8)]
+    found = []
+    for joints in (names, names[::-1], names[3:] + names[:3]):
+        arm = data_arm("panda", rotor_inertia=[0.1] * 7, joints=joints)
+        charts = [(chart, "panda_link8", arm.root) for chart in (Position(), Euler(sequence="zyz"))]
+        found.append(bands.survey(arm, charts).apparent)
+    np.testing.assert_allclose(found[1:], found[:1] * 2, rtol=1e-9)
+
+
 def test_a_joint_chart_completes_the_count():
     """Six directions of the tool and one joint: seven."""
     arm = data_arm("panda", rotor_inertia=[0.1] * 7)

@@ -7,34 +7,41 @@ The control cycle from outside: activation, start, hold, limits, bad states.
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
-from prioritized_tracking.charts import Position
+from prioritized_tracking.charts import Position, RotationVector
 from prioritized_tracking.core import arm as arms
-from prioritized_tracking.core.cycle import limit_torque
+from prioritized_tracking.core.command import limit_torque
+from prioritized_tracking.core.cycle import Controller
+from prioritized_tracking.core.references import PoseHold
+from prioritized_tracking.core.start import StartLimits
 from prioritized_tracking.errors import InputError
 from tests.arms import planar_arm
 from tests.stacks import REST, controller, planar, seven_axes, task
 
 BENT = np.array([0.3, 0.8, 0.4])
 STILL = np.zeros(3)
+ANYWHERE = StartLimits(position=10.0, angle=10.0, joint=10.0)
 
 
-def holding(**settings):
+def holding(force=(0.0, 0.0), **settings):
     """A planar arm that holds tip and posture where it is activated."""
     arm = planar_arm((0.5, 0.4, 0.3), **settings.pop("arm", {}))
-    return controller(arm, [task("pen", Position(axes="xy"), "tip", "base")], **settings)
+    pen = task("pen", Position(axes="xy"), "tip", "base", force=np.array(force))
+    return controller(arm, [pen], **settings)
 
 
 def test_a_step_is_the_bare_law_within_the_limits():
     """step and evaluate agree where no limit acts, at the same path time."""
     control = planar(arm={"effort": 1e4})
     q = control.start_configuration()
-    control.start_limits = type(control.start_limits)(position=10.0, angle=10.0, joint=10.0)
+    control.start_limits = ANYWHERE
     control.activate(5.0, q, STILL)
     control.start(5.0)
     v = np.array([0.1, -0.2, 0.3])
@@ -68,7 +75,7 @@ def test_the_same_steps_give_the_same_numbers():
 def test_paths_wait_for_start_and_hold_brakes_along_them():
     """Before start the reference stays, after hold it comes to rest within the ramp and stays."""
     control = planar()
-    control.start_limits = type(control.start_limits)(position=10.0, angle=10.0, joint=10.0)
+    control.start_limits = ANYWHERE
     q = control.start_configuration()
     control.activate(0.0, q, STILL)
 
@@ -86,10 +93,67 @@ def test_paths_wait_for_start_and_hold_brakes_along_them():
     assert np.linalg.norm(reference(11.0) - reference(10.0)) > 1e-3
 
 
+def test_each_frame_holds_where_it_is_itself():
+    """Two frames, each with a channel that holds: no task has an error at activation."""
+    arm = planar_arm((0.5, 0.4, 0.3))
+    tasks = [
+        task(name, Position(axes="xy"), frame, "base", reference=name)
+        for name, frame in (("pen", "tip"), ("elbow", "link2"))
+    ]
+    plain = controller(arm, tasks)
+    channels = {name: replace(plain.channels["tool"], leader=name) for name in ("pen", "elbow")}
+    control = Controller(arm, plain.stack, {**channels, "joints": plain.channels["joints"]})
+    control.activate(0.0, BENT, STILL)
+    for report in control.step(0.001, BENT, STILL).tasks.values():
+        np.testing.assert_allclose(report.error, 0.0, atol=1e-15)
+
+
+def started_apart(**changes):
+    """The planar arm with changed channels, activated at 0: {name: keywords of Channel}."""
+    plain = planar()
+    channels = {name: replace(c, **changes.get(name, {})) for name, c in plain.channels.items()}
+    control = Controller(plain.arm, plain.stack, channels, start_limits=ANYWHERE)
+    control.activate(0.0, control.start_configuration(), STILL)
+
+    def reference(t):
+        control.step(t, BENT, STILL)
+        return control._samples["tool"].p, control._samples["joints"].q
+
+    tool, joints = (channels[name].path for name in ("tool", "joints"))
+    return control, reference, lambda s: tool.sample(s).p, lambda s: joints.sample(s).q
+
+
+def test_a_path_that_starts_at_activation_does_so_alone_and_at_its_pace():
+    """The other one waits for start, which changes nothing for the first."""
+    control, reference, tip, joints = started_apart(
+        tool={"at_activation": True, "pace": 0.5}, joints={"leader": "joints"}
+    )
+    np.testing.assert_allclose(reference(1.0)[0], tip(0.5), atol=1e-12)
+    np.testing.assert_allclose(reference(1.0)[1], joints(0.0), atol=1e-12)
+    control.start(2.0)
+    np.testing.assert_allclose(reference(3.0)[0], tip(1.5), atol=1e-12)
+    np.testing.assert_allclose(reference(3.0)[1], joints(1.0), atol=1e-12)
+    assert control.duration == pytest.approx(max(4.0 / 0.5, 3.0))
+
+
+def test_a_follower_takes_its_leaders_time():
+    """Start, pace and hold of the leader; its own pace means nothing."""
+    control, reference, tip, joints = started_apart(
+        tool={"pace": 0.5}, joints={"leader": "tool", "pace": 0.1}
+    )
+    control.start(1.0)
+    np.testing.assert_allclose(reference(3.0)[0], tip(1.0), atol=1e-12)
+    np.testing.assert_allclose(reference(3.0)[1], joints(1.0), atol=1e-12)
+    control.hold(3.0)
+    held = reference(9.0)
+    np.testing.assert_allclose(held[0], tip(1.0 + 0.5 * 0.25), atol=1e-9)  # half the ramp of 0.5 s
+    np.testing.assert_allclose(held[1], joints(1.0 + 0.5 * 0.25), atol=1e-9)
+
+
 def test_torque_has_no_step_when_a_path_is_held_and_resumed():
     """No larger change in a cycle than in plain tracking; a jump of the rate would be tens of N·m."""
     control = planar()
-    control.start_limits = type(control.start_limits)(position=10.0, angle=10.0, joint=10.0)
+    control.start_limits = ANYWHERE
     q = control.start_configuration()
     control.activate(0.0, q, STILL)
     control.start(0.0)
@@ -104,6 +168,26 @@ def test_torque_has_no_step_when_a_path_is_held_and_resumed():
     steps = np.abs(np.diff(torques, axis=0)).max(axis=1)
     around = np.r_[1495:1510, 2795:2810]
     assert steps[around].max() < 1.2 * steps[600:1400].max()
+
+
+def test_the_push_ramps_up_after_start_and_down_after_hold():
+    """Only while tracking: none before start, S(½) = ½ of it after 0.25 s, all of it after 0.5 s."""
+    plain, pushing = holding(), holding(force=(30.0, -20.0))
+    for control in (plain, pushing):
+        control.activate(0.0, BENT, STILL)
+
+    def share(t):
+        torque = pushing.step(t, BENT, STILL).torque - plain.step(t, BENT, STILL).torque
+        J = pushing._here.poses[0][2][:2]
+        whole = J.T @ [30.0, -20.0]
+        np.testing.assert_allclose(torque, torque @ whole / (whole @ whole) * whole, atol=1e-9)
+        return torque @ whole / (whole @ whole)
+
+    assert share(0.9) == 0.0
+    pushing.start(1.0)
+    assert [share(t) for t in (1.0, 1.25, 1.5, 3.0)] == pytest.approx([0.0, 0.5, 1.0, 1.0], abs=1e-9)
+    pushing.hold(4.0)
+    assert [share(t) for t in (4.0, 4.25, 4.5, 9.0)] == pytest.approx([1.0, 0.5, 0.0, 0.0], abs=1e-9)
 
 
 @pytest.mark.parametrize("bad", [np.nan, np.inf, -np.inf])
@@ -155,6 +239,30 @@ def test_activation_reports_everything_at_once():
         control.step(0.0, BENT, STILL)
 
 
+@pytest.mark.parametrize(("chart", "free"), [(Position(axes="xy"), "angle"), (RotationVector(), "distance")])
+def test_only_what_tasks_describe_is_judged_at_activation(chart, free):
+    """A pen of which only the position counts may be turned as it likes, and the other way round."""
+    arm = planar_arm((0.5, 0.4, 0.3))
+    R, p = holding().pose(arm.frame_id("tip"), arm.frame_id("base"), BENT)
+    away = {"angle": (np.eye(3), p), "distance": (R, p + [0.3, 0.0, 0.0])}
+    for other, (R_d, p_d) in away.items():
+        control = controller(arm, [task("pen", chart, "tip", "base")], tool=PoseHold(R_d, p_d))
+        if other == free:
+            control.activate(0.0, BENT, STILL)
+        else:
+            with pytest.raises(InputError, match="away from tip"):
+                control.activate(0.0, BENT, STILL)
+
+
+def test_a_refused_activation_leaves_no_hold_behind():
+    """evaluate goes on to hold at the state it is asked about."""
+    control = holding()
+    with pytest.raises(InputError, match="moving"):
+        control.activate(0.0, BENT, STILL + 1.0)
+    for report in control.evaluate(0.0, BENT + 0.3, STILL).tasks.values():
+        np.testing.assert_allclose(report.error, 0.0, atol=1e-15)
+
+
 def test_gravity_by_driver_is_left_out_but_counted():
     """The command lacks gravity; the sum with it stays within the limit."""
     plain, shared = holding(), holding(gravity_by_driver=True)
@@ -191,6 +299,19 @@ def test_torque_limits_cut_feedback_before_feed_forward(feed_forward, feedback, 
         if length > 1e-12 and np.abs(feedback).max() > 1e-6:  # as much of it as fits
             more = np.abs(feed_forward + (scale + 1e-3) * feedback)
             assert np.any(more > limit - 1e-9)
+
+
+def test_the_limited_torque_has_no_step_where_a_limit_begins_to_act():
+    """
+    Joint 1 is beyond its limit but for the feedback, as joint 2 reaches its own.
+
+    """
+    torques = [
+        limit_torque(np.array([120.0, 0.0]), np.array([-30.0, 100.0 + e]), np.full(2, 100.0))[0]
+        for e in (-1e-9, 1e-9)
+    ]
+    np.testing.assert_allclose(torques[0], [90.0, 100.0], atol=1e-6)
+    np.testing.assert_allclose(torques[1], torques[0], atol=1e-6)
 
 
 def test_a_command_reports_every_task_in_order():

@@ -7,6 +7,8 @@ The hierarchy against its textbook form, and every property it promises.
 
 from __future__ import annotations
 
+from fractions import Fraction
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -14,7 +16,7 @@ from hypothesis import strategies as st
 
 from prioritized_tracking.core import branches as br
 from prioritized_tracking.core.claims import Claims
-from prioritized_tracking.core.hierarchy import hierarchy
+from prioritized_tracking.core.hierarchy import hierarchy, small_inverse
 from prioritized_tracking.offline.textbook import TextbookTask, blended
 
 PROMISED = 1e-9
@@ -93,6 +95,43 @@ def test_equals_the_textbook_form_inside_and_outside_bands(sizes, seed):
     np.testing.assert_allclose(feedback, expected.feedback, atol=PROMISED * np.abs(expected.feedback).max())
     np.testing.assert_allclose(push, expected.push, atol=PROMISED * np.abs(expected.push).max())
     np.testing.assert_allclose(report[0], expected.shares, atol=PROMISED)
+    heaviest = max(expected.leaves)
+    np.testing.assert_allclose(report[1], heaviest[2], rtol=1e-6)  # 1/λ up to 1e5 of an M⁻¹ up to 20
+
+
+def exact_inverse(G):
+    """Gauss-Jordan in rational numbers: no pivot of a positive definite matrix is zero."""
+    k = len(G)
+    rows = [
+        [Fraction(x) for x in row] + [Fraction(int(i == j)) for j in range(k)]
+        for i, row in enumerate(G.tolist())
+    ]
+    for i in range(k):
+        rows[i] = [x / rows[i][i] for x in rows[i]]
+        for r in set(range(k)) - {i}:
+            rows[r] = [x - rows[r][i] * y for x, y in zip(rows[r], rows[i], strict=True)]
+    return np.array([[float(x) for x in row[k:]] for row in rows])
+
+
+@pytest.mark.parametrize("k", [1, 2, 3])
+@pytest.mark.parametrize("scale", [1e-6, 1.0, 1e6])
+def test_the_short_way_is_taken_only_where_it_is_accurate(k, scale):
+    """
+    Whatever the units: some 1e-16/1e-7 of the inverse at most, else the eigenvalues are asked.
+
+    """
+    rng, taken = np.random.default_rng(k), 0
+    for _ in range(300):
+        Q, _ = np.linalg.qr(rng.normal(size=(k, k)))
+        A = Q * np.sqrt(scale * 10.0 ** rng.uniform(-9.0, 0.0, k))
+        inverse = np.zeros((k, k))
+        norm = small_inverse(A @ A.T, inverse)
+        if norm < np.inf:
+            taken += 1
+            exact = exact_inverse(A @ A.T)
+            np.testing.assert_allclose(inverse, exact, atol=1e-8 * np.abs(exact).max(), rtol=0.0)
+            assert norm >= np.linalg.norm(exact, 2) * (1.0 - 1e-8)
+    assert taken > 30
 
 
 def test_some_of_the_random_stacks_have_several_branches():

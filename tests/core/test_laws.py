@@ -7,14 +7,16 @@ The laws on whole arms: the Lyapunov function, the textbook form, the baselines'
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
 
-from prioritized_tracking.charts import Cylindrical, Position
+from prioritized_tracking.charts import Cylindrical, Euler, Joints, Position
 from prioritized_tracking.core import arm as arms
 from prioritized_tracking.core.kernel import TWIN_STEP
-from prioritized_tracking.core.laws import LAWS
+from prioritized_tracking.core.laws import LAWS, ToolGains
 from prioritized_tracking.core.references import JointHold, PoseHold
 from prioritized_tracking.offline.textbook import TextbookTask, blended
 from tests.arms import planar_arm
@@ -117,20 +119,53 @@ def test_reference_acceleration_is_the_derivative_of_the_reference_velocity():
         np.testing.assert_allclose(command.torque, expected, atol=1e-2 * (1.0 + np.abs(expected).max()))
 
 
-def test_the_twin_keeps_the_turn_of_an_angle():
-    """An azimuth just below π moves across it: the torque is that of a little before, not 2π/1e-6 larger."""
-    arm = planar_arm((0.5, 0.4, 0.3))
-    turn = task("round", Cylindrical(), "tip", "base")
-    tip = np.array([0.2, 0.5, 0.3])
-    control = controller(arm, [turn], tool=PoseHold(np.eye(3), [-0.7, 0.3, 0.0]), joints=JointHold(tip))
-    frame, base = arm.frame_id("tip"), arm.frame_id("base")
-    azimuth = float(np.arctan2(*control.pose(frame, base, tip)[1][[1, 0]]))
+def turning(what, before):
+    """
+    An arm whose first joint turns at 1 rad/s, and an error that is ``before`` short of π: (controller, q).
+
+    """
+    arm = planar_arm((0.5, 0.4, 0.3), kind="continuous")
+    q = np.array([0.2, 0.5, 0.3])
+    R, p = controller(arm, []).pose(arm.frame_id("tip"), arm.frame_id("base"), q)
+    back = Rotation.from_rotvec([0.0, 0.0, before - np.pi]).as_matrix()  # where the error is π − before
+    goal = q + [before - np.pi, 0.0, 0.0]
+    elbow = Joints(names=["j1"])
+    elbow.bind(arm.joints, (True, True, True))
+    tasks = {
+        "cylindrical": [task("round", Cylindrical(), "tip", "base")],
+        "euler": [task("turn", Euler(sequence="xyz"), "tip", "base")],
+        "joints": [task("elbow", elbow, "", "", reference="joints")],
+        "posture": [],
+    }[what]
+    held = JointHold(goal if what in ("joints", "posture") else q)
+    return controller(arm, tasks, tool=PoseHold(back @ R, back @ p), joints=held), q
+
+
+@pytest.mark.parametrize("what", ["cylindrical", "euler", "joints", "posture"])
+def test_the_twin_keeps_the_turn_of_an_angle(what):
+    """
+    An error crosses π between the state and its twin: q̈_r sees its velocity, not a jump of 2π in 1e-6 s.
+
+    """
     torques = []
-    for before in (3e-7, 1e-3):  # azimuth left to π; the twin moves on by 1e-6 rad
-        q = tip + [np.pi - azimuth - before, 0.0, 0.0]
-        torques.append(control.evaluate(0.0, q, np.array([1.0, 0.0, 0.0])).torque)
-    assert np.abs(torques[0]).max() < 1e3
+    for before in (3e-7, 1e-3):  # the twin moves on by 1e-6 rad: across π, and not
+        control, q = turning(what, before)
+        command = control.evaluate(0.0, q, np.array([1.0, 0.0, 0.0]))
+        error = next(iter(command.tasks.values())).error
+        np.testing.assert_allclose(np.abs(error).max(), np.pi - before, atol=1e-12)
+        torques.append(command.torque)
+    # the error differs by 1e-3 of π; a jump would add M k_p 2π/1e-6, some 1e7 N·m
     np.testing.assert_allclose(torques[0], torques[1], rtol=0.02, atol=0.5)
+
+
+@pytest.mark.parametrize("what", ["joints", "posture"])
+def test_a_whole_turn_of_a_joint_without_end_makes_no_difference(what):
+    """The errors go the short way round; a joint with limits has to turn back."""
+    torques = []
+    for turns in (0, 1, -2):
+        control, q = turning(what, 2.5)
+        torques.append(control.evaluate(0.0, q + [2 * np.pi * turns, 0.0, 0.0], np.ones(3)).torque)
+    np.testing.assert_allclose(torques[1:], torques[:1] * 2, atol=1e-5)  # 4e-16 · 2π · M k_p / 1e-6 and less
 
 
 def test_a_stiff_position_task_reads_as_an_impedance():
@@ -161,7 +196,7 @@ def test_feedback_floor_adds_to_every_direction():
 
 
 def test_push_acts_through_the_jacobian_of_what_is_owned():
-    """A regular top task pushes with Jᵀ F; the torque of a lower one leaves the higher task's force alone."""
+    """A regular top task pushes with Jᵀ F, ramped."""
     arm = planar_arm((0.5, 0.4, 0.3))
     q = np.array([0.3, 0.8, 0.4])
     pen = task("pen", Position(axes="xy"), "tip", "base", handover=(1e6, 1e7), force=np.array([3.0, -2.0]))
@@ -175,6 +210,26 @@ def test_push_acts_through_the_jacobian_of_what_is_owned():
     push = here.poses[0][2][:2].T @ [3.0, -2.0]
     np.testing.assert_allclose(feedback[1.0] - feedback[0.0], push, atol=1e-9)
     np.testing.assert_allclose(feedback[0.25] - feedback[0.0], 0.25 * push, atol=1e-9)
+
+
+def test_push_of_a_lower_task_does_not_accelerate_a_higher_one():
+    """J_1 M⁻¹ τ = 0 (dynamic consistency, Khatib 1987); along itself it pushes what is left of the task."""
+    arm = planar_arm((0.5, 0.4, 0.3))
+    q = np.array([0.3, 0.8, 0.4])
+    torques = []
+    for force in (5.0, 0.0):
+        x, y = (
+            task(axis, Position(axes=axis), "tip", "base", handover=(1e6, 1e7), force=np.array([push]))
+            for axis, push in (("x", 0.0), ("y", force))
+        )
+        control = controller(arm, [x, y], tool=PoseHold(np.eye(3), np.zeros(3)), joints=JointHold(q))
+        torques.append(control.evaluate(0.0, q, np.zeros(3)).torque)
+    M, J = terms(arm, q, q)[0], control._here.poses[0][2][:2]
+    acceleration = J @ np.linalg.solve(M, torques[0] - torques[1])
+    np.testing.assert_allclose(acceleration[0], 0.0, atol=1e-9)
+    # what x leaves of y feels the inertia 1/λ, λ = y-element of J M⁻¹ Jᵀ less what x has of it
+    G = J @ np.linalg.solve(M, J.T)
+    np.testing.assert_allclose(acceleration[1], 5.0 * (G[1, 1] - G[0, 1] ** 2 / G[0, 0]), rtol=1e-9)
 
 
 @pytest.mark.parametrize("law", sorted(LAWS))
@@ -217,6 +272,24 @@ def test_cartesian_impedance_formula():
         inverse = np.linalg.solve(M, J.T) @ np.linalg.pinv(J @ np.linalg.solve(M, J.T))
         posture = M @ (-320.0 * (q - control._here.room.q_d) - 40.0 * v)
         np.testing.assert_allclose(rest, posture - J.T @ (inverse.T @ posture), atol=1e-5)
+
+
+def test_tool_gains_are_the_largest_of_the_highest_task_of_each_kind():
+    """Of arrays the maximum; of several tasks on the tool the first; other frames do not count."""
+    plain = seven_axes()
+    frame, base = plain.stack.motions[0]
+    gains = {"stiffness": np.array([10.0, 30.0, 20.0]), "damping": np.array([2.0, 1.0, 3.0])}
+    tasks = (
+        replace(task("turn", Euler(), frame, base), **gains),
+        task("elbow", Position(), "panda_link4", base, stiffness=999.0),
+        replace(task("tip", Position(), frame, base), stiffness=np.array([5.0, 7.0, 6.0])),
+        task("again", Position(), frame, base, stiffness=888.0),
+    )
+    tool = ToolGains(replace(plain.stack, tasks=tasks))
+    order = np.argsort(tool.rows)  # rows of the Jacobian: translation, then rotation
+    np.testing.assert_array_equal(tool.rows[order], np.arange(6))
+    np.testing.assert_array_equal(tool.stiffness[order], [7.0] * 3 + [30.0] * 3)
+    np.testing.assert_array_equal(tool.damping[order], [100.0] * 3 + [3.0] * 3)
 
 
 def test_inverse_jacobian_reaches_the_tool_velocity_exactly():

@@ -33,6 +33,7 @@ class JointController:
         self.joints, self.rate, self.duration = self.arm.joints, RATE, duration
         self.goal, self.stiffness, self.damping = np.array([0.3, 0.8]), stiffness, damping
         self.tools, self.channels = {"tip": (0, 0, "path")}, {}
+        self.described = {"tip": frozenset()}
         self.stack = SimpleNamespace(
             tasks=(), posture=SimpleNamespace(name="posture", unit="rad", tolerance=None)
         )

@@ -50,7 +50,9 @@ class Source:
     path: str
     parameters: Mapping[str, Any]
 
-    def load(self, law: str | None = None, progress: Callable[[float, str], None] | None = None) -> Controller:
+    def load(
+        self, law: str | None = None, progress: Callable[[float, str], None] | None = None
+    ) -> Controller:
         """
         Build the controller.
 
