@@ -200,7 +200,8 @@ def blended(
     n = M.shape[0]
     total = Outcome(np.zeros(n), np.zeros((n, n)), np.zeros(n), np.zeros(len(tasks) + 1))
     limit = np.full(n, np.inf) if claim_speed is None else claim_speed
-    walk = _Walk(M, np.linalg.inv(M), tasks, posture, posture_damping, limit, with_feedback, total)
+    M_inverse: Array = np.asarray(np.linalg.inv(M), dtype=np.float64)
+    walk = _Walk(M, M_inverse, tasks, posture, posture_damping, limit, with_feedback, total)
     walk.visit(0, _Branch(1.0, np.eye(n), np.zeros(n), np.zeros((n, n)), np.zeros(n), (), ()))
     return total
 

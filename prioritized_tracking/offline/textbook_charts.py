@@ -64,7 +64,7 @@ def cylinder(entry: Mapping[str, Any]) -> Formula:
     point, axis, radius = np.array(entry["point"], dtype=float), _unit(entry["axis"]), entry["radius"]
     across = np.eye(3) - np.outer(axis, axis)
 
-    def formula(R: Array, p: Array) -> Coordinates:
+    def formula(_R: Array, p: Array) -> Coordinates:
         away = across @ (p - point)
         distance = np.linalg.norm(away)
         rows = np.concatenate([away / distance, np.zeros(3)])[None]
@@ -85,7 +85,7 @@ def cylindrical(entry: Mapping[str, Any]) -> Formula:
     quarter = np.cross(axis, zero)
     off, on = entry["near_axis"]
 
-    def formula(R: Array, p: Array) -> Coordinates:
+    def formula(_R: Array, p: Array) -> Coordinates:
         a, b, height = (p - point) @ np.stack([zero, quarter, axis], axis=1)
         r = np.hypot(a, b)
         e_r = (a * zero + b * quarter) / r
@@ -107,7 +107,7 @@ def euler(entry: Mapping[str, Any]) -> Formula:
     off, on = entry["validity"]
     unit = np.eye(3)
 
-    def formula(R: Array, p: Array) -> Coordinates:
+    def formula(R: Array, _p: Array) -> Coordinates:
         if i == k:
             first, last = np.arctan2(R[j, i], -sign * R[third, i]), np.arctan2(R[i, j], sign * R[i, third])
             middle = np.arctan2(np.hypot(R[j, i], R[third, i]), R[i, i])

@@ -22,6 +22,7 @@ from prioritized_tracking.errors import InputError, Problem
 from prioritized_tracking.offline import textbook_charts
 from prioritized_tracking.offline.textbook import Array, Outcome, TextbookTask, blended
 
+Errors: TypeAlias = dict[str, Array]
 Samples: TypeAlias = Mapping[str, Any]
 """A sample of each channel: R, p, V, A of a pose, or q, v, a of joints."""
 
@@ -104,15 +105,15 @@ class TextbookController:
         return torque if self._gravity_by_driver else torque + g
 
     def _reference(
-        self, q: Array, samples: Samples, M: Array, nominal: Mapping[str, Array], *, twin: bool = False
-    ) -> tuple[Outcome, dict[str, Array]]:
+        self, q: Array, samples: Samples, M: Array, nominal: Errors, *, twin: bool = False
+    ) -> tuple[Outcome, Errors]:
         """
         Reference velocity, feedback and push, and the errors.
 
         A twin keeps the turns of the ``nominal`` errors, and needs no feedback.
 
         """
-        errors: dict[str, Array] = {}
+        errors: Errors = {}
         poses = {motion: self._pose(*motion) for motion in self.stack.motions}
         tasks = []
         for task in self.stack.tasks:
@@ -138,7 +139,7 @@ class TextbookController:
         R: Array,
         p: Array,
         target: Any,
-        nominal: Mapping[str, Array],
+        nominal: Errors,
         errors: dict[str, Array],
     ) -> tuple[Array, Array, float]:
         """
@@ -159,7 +160,7 @@ class TextbookController:
         return here.rows, here.rate @ (x_dot_d - task.k_p * error), c
 
     def _joint_claim(
-        self, task: Any, q: Array, target: Any, nominal: Mapping[str, Array], errors: dict[str, Array]
+        self, task: Any, q: Array, target: Any, nominal: Errors, errors: Errors
     ) -> tuple[Array, Array, float]:
         """
         Rows, ν_r and c = 1 of a task on chosen joints.
@@ -195,9 +196,7 @@ class TextbookController:
         return samples
 
 
-def _error(
-    name: str, difference: Array, angular: Any, nominal: Mapping[str, Array], errors: dict[str, Array]
-) -> Array:
+def _error(name: str, difference: Array, angular: Any, nominal: Errors, errors: Errors) -> Array:
     """
     Wrap the error where it is an angle, next to the nominal one if there is one, and note it.
 

@@ -19,7 +19,6 @@ from numpy.typing import NDArray
 import prioritized_tracking as pt
 from prioritized_tracking.core.cycle import Controller
 from prioritized_tracking.errors import InputError, Problem
-from prioritized_tracking.offline.rehearse import default_seconds
 from prioritized_tracking.parameters.stack_paths import find_package
 
 Array = NDArray[np.float64]
@@ -29,6 +28,8 @@ State: TypeAlias = tuple[float, Array, Array]
 _WELD = {"frame": "probe", "reference": "weld"}
 _FORCE = {"stiffness": 4800.0, "damping": 300.0}
 _MOMENT = {"stiffness": 192.0, "damping": 12.0}
+
+Progress: TypeAlias = Callable[[float, str], None]
 
 #: The demo's arm and path with 6 tasks of 1 + 3 + 3 + 3 + 3 + 7 = 20 rows.
 _REFERENCE_TASKS: dict[str, dict[str, Any]] = {
@@ -58,13 +59,6 @@ class Source:
 
         """
         return pt.load(self.path, law=law, parameters=self.parameters, progress=progress)
-
-    def __call__(self) -> Controller:
-        """
-        Build the controller, as `load`.
-
-        """
-        return self.load()
 
 
 def demo_file(name: str) -> Path:
@@ -142,7 +136,9 @@ def path_times(controller: Controller, count: int) -> Array:
     Path times (count,), s, spread over the path.
 
     """
-    longest = default_seconds(controller) if math.isinf(controller.duration) else controller.duration
+    longest = controller.duration
+    if math.isinf(longest):
+        longest = max(c.path.file_duration for c in controller.channels.values() if c.path is not None)
     return np.linspace(0.0, longest, count)
 
 

@@ -36,11 +36,12 @@ def chain_urdf(n: int) -> str:
     """
     length, mass = _REACH / n, _MASS / n
     across, along = mass * (3 * 0.05**2 + length**2) / 12.0, 0.5 * mass * 0.05**2
+    inertia = f'ixx="{across}" iyy="{across}" izz="{along}" ixy="0" ixz="0" iyz="0"'
     parts = ['<robot name="chain"><link name="link0"/>']
     for i in range(1, n + 1):
         parts.append(
             f'<link name="link{i}"><inertial><origin xyz="0 0 {length / 2}"/><mass value="{mass}"/>'
-            f'<inertia ixx="{across}" iyy="{across}" izz="{along}" ixy="0" ixz="0" iyz="0"/></inertial></link>'
+            f"<inertia {inertia}/></inertial></link>"
             f'<joint name="joint{i}" type="revolute"><parent link="link{i - 1}"/><child link="link{i}"/>'
             f'<origin xyz="0 0 {length if i > 1 else 0.2}"/><axis xyz="{_AXES[(i - 1) % 4]}"/>'
             '<limit lower="-2.8" upper="2.8" velocity="2" effort="500"/></joint>'
@@ -53,7 +54,7 @@ def tool_tasks(n: int, count: int) -> list[str]:
     Tasks of 3 rows each on the last link, its pose described over and over.
 
     """
-    return [f"{_CHARTS[i % len(_CHARTS)]}, frame: link{n}" for i in range(count)]
+    return [f"{_CHARTS[i % len(_CHARTS)]}, frame: link{n}, reference: link{n}" for i in range(count)]
 
 
 def link_tasks(n: int, count: int) -> list[str]:
@@ -61,7 +62,10 @@ def link_tasks(n: int, count: int) -> list[str]:
     Tasks of 1 row each, on different links, so that each of them owns something.
 
     """
-    return [f"chart: position, axes: {'xyz'[i % 3]}, frame: link{n - count + 1 + i}" for i in range(count)]
+    return [
+        f"chart: position, axes: '{'xyz'[i % 3]}', frame: link{link}, reference: link{link}"
+        for i, link in enumerate(range(n - count + 1, n + 1))
+    ]
 
 
 def load_chain(folder: Path, n: int, tasks: list[str]) -> Controller:
@@ -71,12 +75,13 @@ def load_chain(folder: Path, n: int, tasks: list[str]) -> Controller:
     Parameters
     ----------
     folder : for the URDF and the stack file.
-    tasks : chart and frame of each, as the entries of a stack file.
+    tasks : chart, frame and reference of each, as the entries of a stack file; the reference holds.
 
     """
     (folder / f"chain{n}.urdf").write_text(chain_urdf(n), encoding="utf-8")
-    common = f"reference: place, stiffness: 480.0, damping: 30.0, handover: {_FAR}"
+    common = f"stiffness: 480.0, damping: 30.0, handover: {_FAR}"
     names = [f"task{i}" for i in range(len(tasks))]
+    channels = sorted({keys.rpartition(" ")[2] for keys in tasks})
     text = "\n".join(
         [
             "/**:",
@@ -90,7 +95,7 @@ def load_chain(folder: Path, n: int, tasks: list[str]) -> Controller:
             *(f"      {name}: {{{keys}, {common}}}" for name, keys in zip(names, tasks, strict=True)),
             "      posture: {chart: posture, reference: rest}",
             "    references:",
-            "      place: {kind: pose, source: hold}",
+            *(f"      {channel}: {{kind: pose, source: hold}}" for channel in channels),
             "      rest: {kind: joints, source: hold}",
         ]
     )
