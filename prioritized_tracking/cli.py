@@ -34,9 +34,9 @@ _COMPANION = """Compute the joint reference that agrees with a pose path of the 
 within the joint limits and through singularities. Writes a joints file: t and one column for each joint."""
 
 _BENCH = """Measure the control law on this machine: one cycle by part, against a textbook version in NumPy,
-the bare terms of the dynamics library and Cartesian impedance; branches, growth with joints and rows, rehearsals,
-batches, memory, starting. Times are compared in turns, so their ratios mean more than the times. Takes two
-minutes; writes bench.json and bench.png to DIR."""
+the bare terms of the dynamics library and Cartesian impedance; branches, growth with joints and rows,
+rehearsals, batches, memory, starting. Times are compared in turns, so their ratios mean more than the times.
+Takes a minute; writes bench.json and bench.png to DIR."""
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

@@ -18,7 +18,7 @@ from prioritized_tracking.offline.bench.machine import describe
 
 Figures: TypeAlias = Mapping[str, Any]
 
-_INK = ("#33658a", "#86bbd8", "#2f4858", "#f6ae2d", "#f26419", "#758e4f", "#a9a9a9")
+_INK = ("#33658a", "#86bbd8", "#2f4858", "#f6ae2d", "#f26419", "#758e4f", "#a9a9a9", "#c5283d")
 
 
 def draw(figures: Figures, path: Path) -> None:

@@ -7,7 +7,9 @@ One cycle: its parts, what it is compared with, and what branches cost.
 
 from __future__ import annotations
 
+import tempfile
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -18,7 +20,8 @@ from prioritized_tracking.core.command import limit_torque
 from prioritized_tracking.core.cycle import Controller
 from prioritized_tracking.core.kernel import TWIN_STEP, reference_velocity
 from prioritized_tracking.errors import InputError
-from prioritized_tracking.offline.bench.cases import State, set_out, spread
+from prioritized_tracking.offline.bench.cases import Array, State, set_out, spread, state_at
+from prioritized_tracking.offline.bench.chains import load_chain
 from prioritized_tracking.offline.bench.timing import Times, compare
 from prioritized_tracking.offline.textbook_step import TextbookController
 
@@ -37,16 +40,29 @@ def parts_us(controller: Controller, state: State, seconds: float) -> dict[str, 
     dict
         `references`, `dynamics` (M, C, g), `charts` (poses, Jacobians and charts), `hierarchy` (claims,
         Cholesky factor, tasks, blended velocity), `twin` (all of these again, a moment later), `law`
-        (damping, feed-forward, feedback), `command` (limits, telemetry); `step` is the whole.
+        (damping, feed-forward, feedback), `call` (handing the arrays to compiled code: what the kernel takes
+        with one joint and no chart), `command` (limits, telemetry); `step` is the whole.
 
     """
-    times = {name: t.p50_us for name, t in compare(_parts(controller, state), seconds).items()}
-    kernel, twin_kernel = times.pop("kernel"), times.pop("twin kernel")
-    twin = times.pop("twin terms") + twin_kernel
-    order = ("references", "dynamics", "charts", "hierarchy")
-    found = {name: times[name] for name in order}
-    found |= {"twin": twin, "law": max(0.0, kernel - times["hierarchy"] - twin_kernel)}
-    return found | {"command": times["command"], "step": times["step"]}
+    with tempfile.TemporaryDirectory() as folder:
+        least = load_chain(Path(folder), 1, [])
+    least.step(0.0, *state_at(least, 0.0)[1:])
+    functions = _parts(controller, state) | {f"least {k}": f for k, f in _kernel_parts(least).items()}
+    times = {name: each.p50_us for name, each in compare(functions, seconds).items()}
+    call, part_call = times["least kernel"], times["least hierarchy"]
+    hierarchy = times["hierarchy"] - part_call
+    twin = times["twin hierarchy"] - part_call
+    return {
+        "references": times["references"],
+        "dynamics": times["dynamics"],
+        "charts": times["charts"],
+        "hierarchy": hierarchy,
+        "twin": times["twin terms"] + twin,
+        "law": max(0.0, times["kernel"] - call - hierarchy - twin),
+        "call": call,
+        "command": times["command"],
+        "step": times["step"],
+    }
 
 
 def _parts(controller: Controller, state: State) -> Functions:
@@ -57,7 +73,6 @@ def _parts(controller: Controller, state: State) -> Functions:
     t, q, v = state
     here, there, law = controller._here, controller._there, controller.law
     samples = controller._references.at(t)
-    layout, gains, branches = law.layout, controller.stack.gains, law._branches  # type: ignore[attr-defined]
     twin, limit = q + TWIN_STEP * v, controller._torque_limit
 
     def twin_terms() -> None:
@@ -73,11 +88,25 @@ def _parts(controller: Controller, state: State) -> Functions:
         "references": lambda: controller._references.at(t),
         "dynamics": lambda: dynamics(controller.arm, here.data, q, v),
         "charts": lambda: here.update(q, samples),
-        "hierarchy": lambda: reference_velocity(layout, gains, here.room, here.room, branches, False),
         "twin terms": twin_terms,
-        "twin kernel": lambda: reference_velocity(layout, gains, there.room, here.room, branches, True),
-        "kernel": lambda: law.torque(here, there, v, 1.0),
+        **_kernel_parts(controller, v),
         "command": command,
+    }
+
+
+def _kernel_parts(controller: Controller, v: Array | None = None) -> Functions:
+    """
+    The compiled parts, at the controller's last state.
+
+    """
+    here, there, law = controller._here, controller._there, controller.law
+    gains, branches = controller.stack.gains, law._branches  # type: ignore[attr-defined]
+    speed = np.zeros(controller.arm.n) if v is None else v
+    layout = law.layout
+    return {
+        "hierarchy": lambda: reference_velocity(layout, gains, here.room, here.room, branches, False),
+        "twin hierarchy": lambda: reference_velocity(layout, gains, there.room, here.room, branches, True),
+        "kernel": lambda: law.torque(here, there, speed, 1.0),
     }
 
 
