@@ -77,24 +77,18 @@ def _branches(cases: Figures) -> list[list[str]]:
 
 
 def _growth(growth: Figures) -> list[list[str]]:
-    rows = [["over", "at", "kernel", "exponent", "cycle", "exponent"]]
+    rows = [["over", "at", "kernel", "exponent", "per row", "cycle", "exponent", "per row"]]
     for name, of in (
         ("joints", "joints"),
         ("rows on 7 joints", "rows_tool"),
         ("rows on 30 joints", "rows_links"),
     ):
         part = growth[of]
-        at = part["joints"] if of == "joints" else part["rows"]
-        rows.append(
-            [
-                name,
-                _list(at),
-                _list(part["kernel_us"]),
-                f"{part['kernel_exponent']:.2f}",
-                _list(part["step_us"]),
-                f"{part['step_exponent']:.2f}",
-            ]
-        )
+        row = [name, _list(part["joints"] if of == "joints" else part["rows"])]
+        for what in ("kernel", "step"):
+            slope = part.get(f"{what}_line", {}).get("us_per_row")
+            row += [_list(part[f"{what}_us"]), f"{part[f'{what}_exponent']:.2f}", short(slope)]
+        rows.append(row)
     return rows
 
 
@@ -105,7 +99,7 @@ def _others(figures: Figures) -> Iterator[list[str]]:
     yield ["  p99, µs", short(steady["p99_us"])]
     yield ["  p99 / p50", short(steady["p99_over_p50"])]
     yield ["  objects left for the garbage collector", short(steady["objects"])]
-    yield ["  growth of Python's memory in a tenth of them, bytes", short(steady["traced_bytes"])]
+    yield ["  growth of Python's memory, bytes", short(steady["traced_bytes"])]
     yield ["  growth of the process, bytes", short(steady["resident_bytes"])]
     if inside := figures["interpreted"]:
         yield ["cycle without numba, µs", short(inside["step"]["p50_us"])]

@@ -36,18 +36,19 @@ def steady(controller: Controller, cycles: int) -> dict[str, Any]:
     -------
     dict
         `cycles`; `p50_us`, `p99_us`, `p99_over_p50` of a cycle; `objects`: how many more objects the garbage
-        collector has to scan at the end; `traced_bytes`: how much more memory Python holds after a further
-        tenth of the cycles; `resident_bytes`: how much more the system has given the process, or None.
+        collector would have to scan at the end; `traced_bytes`: how much more memory Python holds after a
+        tenth of the cycles, repeated; `resident_bytes`: how much more the system has given, or None.
 
     """
     states = [state_at(controller, float(t)) for t in path_times(controller, cycles)]
     times = np.zeros(cycles, dtype=np.int64)
-    _run(controller, states[: cycles // 10], times)
+    few = states[: max(1, cycles // 10)]
     with frozen():
+        _run(controller, few, times)  # what a cycle leaves for the next is there from here on
         objects, resident = len(gc.get_objects()), _resident()
         _run(controller, states, times)
         objects, more = len(gc.get_objects()) - objects, _resident()
-        traced = _traced(controller, states[: cycles // 10])
+        traced = _traced(controller, few)
     return {
         "cycles": cycles,
         **times_of(times).figures(),
@@ -85,13 +86,13 @@ def frozen() -> Iterator[None]:
 
 def _traced(controller: Controller, states: list[tuple[float, Array, Array]]) -> int:
     """
-    Growth of the memory Python has allocated, bytes, while the states are gone through.
+    Growth of the memory Python has allocated, bytes, while the states are gone through a second time.
 
     """
     times = np.zeros(len(states), dtype=np.int64)
     tracemalloc.start()
     try:
-        _run(controller, states[:10], times)
+        _run(controller, states, times)
         before = tracemalloc.get_traced_memory()[0]
         _run(controller, states, times)
         return tracemalloc.get_traced_memory()[0] - before

@@ -40,8 +40,8 @@ def parts_us(controller: Controller, state: State, seconds: float) -> dict[str, 
     dict
         `references`, `dynamics` (M, C, g), `charts` (poses, Jacobians and charts), `hierarchy` (claims,
         Cholesky factor, tasks, blended velocity), `twin` (all of these again, a moment later), `law`
-        (damping, feed-forward, feedback), `call` (handing the arrays to compiled code: what the kernel takes
-        with one joint and no chart), `command` (limits, telemetry); `step` is the whole.
+        (damping, feed-forward, feedback), `fixed` (what these three take with one joint and no chart: handing
+        arrays to compiled code, calls of LAPACK), `command` (limits, telemetry); `step` is the whole.
 
     """
     with tempfile.TemporaryDirectory() as folder:
@@ -49,17 +49,17 @@ def parts_us(controller: Controller, state: State, seconds: float) -> dict[str, 
     least.step(0.0, *state_at(least, 0.0)[1:])
     functions = _parts(controller, state) | {f"least {k}": f for k, f in _kernel_parts(least).items()}
     times = {name: each.p50_us for name, each in compare(functions, seconds).items()}
-    call, part_call = times["least kernel"], times["least hierarchy"]
-    hierarchy = times["hierarchy"] - part_call
-    twin = times["twin hierarchy"] - part_call
+    fixed, part_fixed = times["least kernel"], times["least hierarchy"]
+    hierarchy = times["hierarchy"] - part_fixed
+    twin = times["twin hierarchy"] - part_fixed
     return {
         "references": times["references"],
         "dynamics": times["dynamics"],
         "charts": times["charts"],
         "hierarchy": hierarchy,
         "twin": times["twin terms"] + twin,
-        "law": max(0.0, times["kernel"] - call - hierarchy - twin),
-        "call": call,
+        "law": max(0.0, times["kernel"] - fixed - hierarchy - twin),
+        "fixed": fixed,
         "command": times["command"],
         "step": times["step"],
     }
