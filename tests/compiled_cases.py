@@ -19,7 +19,7 @@ from prioritized_tracking.charts import registry
 from prioritized_tracking.charts.base import ChartWork
 from prioritized_tracking.core import branches, claims, hierarchy, kernel
 from prioritized_tracking.core.command import limit_torque
-from prioritized_tracking.core.rotation import rotation_exp, rotation_log
+from prioritized_tracking.core.rotation import advance_pose, rotation_log
 from prioritized_tracking.core.smooth import fade, saturation, smoothstep, wrap
 from prioritized_tracking.errors import InputError
 
@@ -43,7 +43,9 @@ def small_functions():
     for angle in angles:
         r = angle * np.array([0.6, -0.48, 0.64])
         out = np.zeros(3)
-        logs.append([rotation_log(Rotation.from_rotvec(r).as_matrix(), out), *out, *rotation_exp(r).ravel()])
+        R, R_h, p_h, V_h = Rotation.from_rotvec(r).as_matrix(), np.zeros((3, 3)), np.zeros(3), np.zeros(6)
+        advance_pose(R, r, np.arange(6.0), np.ones(6), 1e-6, R_h, p_h, V_h)
+        logs.append([rotation_log(R, out), *out, *R_h.ravel(), *p_h, *V_h])
     switches = [[smoothstep(z), saturation(abs(z)), fade(z, 0.9, 0.1), wrap(7.0 * z)] for z in grid]
     return {"switches": np.array(switches), "rotations": np.array(logs)}
 

@@ -220,6 +220,7 @@ class Controller:
         here, law : arrays that the next call overwrites.
 
         """
+        q, _ = self._state(q, np.zeros(self.arm.n))
         here = self._here
         inertia(self.arm, here.data, q)
         here.update(q, self._references.at_path_time(t, self._holder(q)))
@@ -231,7 +232,7 @@ class Controller:
         Go through everything a cycle needs, at the start of the references, without sending anything.
 
         """
-        q = self.start_configuration()
+        q, _ = self._state(self.start_configuration(), np.zeros(self.arm.n))
         self._samples = self._references.at_path_time(0.0, self._holder(q))
         outcome = self._law(q, np.zeros_like(q), self._samples, 1.0)
         self._command(limit_torque(outcome.feed_forward, outcome.feedback, self._torque_limit)[0], False)

@@ -111,7 +111,12 @@ class Law:
             The state has no solution.
 
         """
-        raise NotImplementedError(f"law {self.name} has no shares")
+        raise InputError(
+            Problem(
+                what=f"law '{self.name}' has no shares",
+                remedy="Evaluate it with torque, or take prioritized.",
+            )
+        )
 
     def prepare(self, here: Evaluation, nominal: Evaluation | None = None) -> None:
         """
@@ -176,7 +181,8 @@ class Prioritized(Law):
         room, outcome = here.room, self.outcome
         count, self.pruned = reference_velocity(self.layout, self._gains, room, room, self._branches, False)
         blend(self._branches, count, outcome.report, outcome.D, outcome.push)
-        outcome.D[np.diag_indices_from(outcome.D)] += self._floor
+        if self._floor > 0.0:
+            outcome.D[np.diag_indices_from(outcome.D)] += self._floor
         self._take(here, count)
 
     def _take(self, here: Evaluation, count: int) -> None:

@@ -70,30 +70,6 @@ def rotation_log(R: Array, out: Array) -> float:
 
 
 @compiled
-def rotation_exp(r: Array) -> Array:
-    """
-    Rotation matrix of a rotation vector (rad), Rodrigues' formula.
-
-    Parameters
-    ----------
-    r : (3,) rotation vector.
-
-    Returns
-    -------
-    (3, 3) array
-        I + sin θ/θ [r]× + (1 − cos θ)/θ² [r]×².
-
-    """
-    angle = math.sqrt(r[0] * r[0] + r[1] * r[1] + r[2] * r[2])
-    half = 0.5 * angle
-    s = 1.0 if angle < _SMALL else math.sin(angle) / angle
-    v = 0.5 if angle < _SMALL else 0.5 * (math.sin(half) / half) ** 2
-    K = np.array([[0.0, -r[2], r[1]], [r[2], 0.0, -r[0]], [-r[1], r[0], 0.0]])
-    R: Array = np.eye(3) + s * K + v * (K @ K)
-    return R
-
-
-@compiled
 def advance_pose(
     R: Array, p: Array, V: Array, A: Array, h: float, R_h: Array, p_h: Array, V_h: Array
 ) -> None:

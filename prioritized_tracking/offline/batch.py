@@ -54,6 +54,8 @@ def evaluate_states(
     """
     t, positions, velocities = _states(controller, times, q, v)
     found = _allocate(controller, len(t), torque)
+    if not (torque or controller.law.has_shares):
+        controller.survey(0.0, controller.start_configuration())  # says why not
     law, report = controller.law, controller.law.outcome.report
     for k in range(len(t)):
         try:

@@ -15,6 +15,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+import prioritized_tracking as pt
 from prioritized_tracking import compiled
 from tests import compiled_cases
 
@@ -81,6 +82,31 @@ def test_the_cases_contain_hand_overs_and_pruning():
 def test_numba_can_be_turned_off():
     """The status says so, for whoever wonders why it is slow."""
     assert run(["-c", SCRIPT], NUMBA_DISABLE_JIT="1") == "interpreted: NUMBA_DISABLE_JIT is set"
+
+
+def specializations():
+    """How many versions of compiled functions there are in this process."""
+    modules = [m for name, m in sys.modules.items() if name.startswith("prioritized_tracking.")]
+    functions = {id(f): f for m in modules for f in vars(m).values() if hasattr(f, "signatures")}
+    return sum(len(function.signatures) for function in functions.values())
+
+
+@needs_numba
+@pytest.mark.parametrize("law", ["prioritized", "cartesian_impedance", "inverse_jacobian"])
+@pytest.mark.parametrize("stack", ["demo_stack", "planar_stack"])
+def test_nothing_is_compiled_after_loading(stack, law):
+    """Not in the first cycle, nor in any other state of the path."""
+    controller = pt.load(compiled_cases.CONFIG / f"{stack}.yaml", law=law)
+    before = specializations()
+    assert before > 10
+    q = controller.start_configuration()
+    controller.activate(0.0, q, 0 * q)
+    controller.start(0.0)
+    for k in range(20):
+        controller.step(0.001 * k, q + 1e-3, 0 * q)
+        controller.evaluate(0.7 * k, q + 0.1 * k, 0 * q)
+        controller.pose_errors(q)
+    assert specializations() == before
 
 
 @needs_numba

@@ -16,7 +16,7 @@ from hypothesis import strategies as st
 
 from prioritized_tracking.core import branches as br
 from prioritized_tracking.core.claims import Claims
-from prioritized_tracking.core.hierarchy import hierarchy, small_inverse
+from prioritized_tracking.core.hierarchy import hierarchy, largest_eigenvalue, principal, small_inverse
 from prioritized_tracking.offline.textbook import TextbookTask, blended
 
 PROMISED = 1e-9
@@ -365,3 +365,36 @@ def test_gains_read_as_an_impedance_at_rest():
     torque = -feedback @ (velocity - q_r)
     expected = -J.T @ (damping * (J @ velocity) + stiffness * error)
     np.testing.assert_allclose(torque, expected, rtol=1e-9)
+
+
+@pytest.mark.parametrize("k", [1, 2, 3])
+def test_largest_eigenvalue_in_closed_form_is_lapacks(k):
+    """
+    Also for repeated and tiny eigenvalues. Where two meet, the angle's arc cosine loses half of the digits.
+
+    """
+    rng = np.random.default_rng(k)
+    spectra = [rng.uniform(0.1, 2.0, k) for _ in range(200)]
+    spectra += [np.ones(k), np.full(k, 1e-12), np.r_[1.0, np.zeros(k - 1)], np.r_[np.ones(k - 1), 1e-14]]
+    spectra += [np.r_[1.0 + 1e-9, np.ones(k - 1)], np.full(k, 1e80), np.zeros(k)]
+    for spectrum in spectra:
+        Q, _ = np.linalg.qr(rng.normal(size=(k, k)))
+        G = Q @ np.diag(spectrum) @ Q.T
+        G = 0.5 * (G + G.T)
+        expected = np.linalg.eigvalsh(G)[-1]
+        assert abs(largest_eigenvalue(G) - expected) <= 3e-8 * abs(expected) + 1e-300
+
+
+@pytest.mark.parametrize("k", range(1, 7))
+def test_principal_directions_diagonalise_from_high_to_low(k):
+    """Residual of G U = U diag(λ), with repeated and tiny eigenvalues; the order numba and NumPy agree on."""
+    rng = np.random.default_rng(k)
+    for spectrum in (rng.uniform(0, 1, k), np.ones(k), np.r_[np.ones(k - 1), 1e-15], np.zeros(k)):
+        Q, _ = np.linalg.qr(rng.normal(size=(k, k)))
+        G = Q @ np.diag(spectrum) @ Q.T
+        G = 0.5 * (G + G.T)
+        lam, U = principal(G)
+        np.testing.assert_allclose(G @ U, U * lam, atol=1e-14 * k)
+        np.testing.assert_allclose(U.T @ U, np.eye(k), atol=1e-14 * k)
+        np.testing.assert_array_equal(lam, np.sort(lam)[::-1])
+        np.testing.assert_allclose(lam, np.linalg.eigvalsh(G)[::-1], atol=1e-14 * k)

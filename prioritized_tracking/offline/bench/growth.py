@@ -8,7 +8,7 @@ How the time of a cycle grows with joints, and with rows.
 from __future__ import annotations
 
 import tempfile
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -28,9 +28,7 @@ def over_joints(counts: Sequence[int], seconds: float) -> dict[str, Any]:
         chains = [load_chain(Path(folder), n, tool_tasks(n, 3)) for n in counts]
     found = _timed(chains, seconds)
     found["joints"] = list(counts)
-    for part in ("kernel", "step"):
-        found[f"{part}_exponent"] = fit_power(counts, found[f"{part}_us"])
-    return found
+    return found | _exponents(counts, found)
 
 
 def over_rows(n: int, counts: Sequence[int], seconds: float, *, spread: bool) -> dict[str, Any]:
@@ -48,11 +46,23 @@ def over_rows(n: int, counts: Sequence[int], seconds: float, *, spread: bool) ->
         chains = [load_chain(Path(folder), n, make(n, count)) for count in counts]
     found = _timed(chains, seconds)
     found |= {"joints": n, "tasks": list(counts), "rows": [rows(chain) - n for chain in chains]}
+    found |= _exponents(found["rows"], found)
     for part in ("kernel", "step"):
-        found[f"{part}_exponent"] = fit_power(found["rows"], found[f"{part}_us"])
         slope, start, deviation = fit_line(found["rows"], found[f"{part}_us"])
         found[f"{part}_line"] = {"us_per_row": slope, "us_at_0": start, "deviation": deviation}
     return found
+
+
+def _exponents(at: Sequence[int], found: Mapping[str, Any]) -> dict[str, float]:
+    """
+    Exponents of kernel and cycle: over all sizes, and over the two largest, where fixed costs count least.
+
+    """
+    exponents = {}
+    for part in ("kernel", "step"):
+        exponents[f"{part}_exponent"] = fit_power(at, found[f"{part}_us"])
+        exponents[f"{part}_last_exponent"] = fit_power(at[-2:], found[f"{part}_us"][-2:])
+    return exponents
 
 
 def _timed(chains: Sequence[Controller], seconds: float) -> dict[str, Any]:

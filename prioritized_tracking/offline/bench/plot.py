@@ -63,10 +63,15 @@ def _others(axes: Any, case: Figures) -> None:
 
 def _growth(axes: Any, curves: Mapping[str, tuple[list[float], Figures]], over: str) -> None:
     ink = iter(_INK)
+    sizes = sorted({size for at, _ in curves.values() for size in at})
     for name, (at, part) in curves.items():
         for what, word in (("step", "cycle"), ("kernel", "kernel")):
             label = f"{name}{word}: exponent {part[f'{what}_exponent']:.2f}"
             axes.loglog(at, part[f"{what}_us"], "o-", color=next(ink), label=label)
     axes.set(xlabel=over, ylabel="µs", title=f"growth over {over}")
+    axes.set_xticks(sizes, [str(size) for size in sizes], minor=False)
+    axes.xaxis.minorticks_off()
+    axes.yaxis.set_major_formatter("{x:g}")
+    axes.yaxis.set_minor_formatter("{x:g}")
     axes.grid(True, which="both", alpha=0.3)
     axes.legend(fontsize=7)

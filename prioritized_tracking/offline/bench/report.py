@@ -77,7 +77,7 @@ def _branches(cases: Figures) -> list[list[str]]:
 
 
 def _growth(growth: Figures) -> list[list[str]]:
-    rows = [["over", "at", "kernel", "exponent", "per row", "cycle", "exponent", "per row"]]
+    rows = [["over", "at", "kernel", "exponent", "last", "per row", "cycle", "exponent", "last", "per row"]]
     for name, of in (
         ("joints", "joints"),
         ("rows on 7 joints", "rows_tool"),
@@ -87,7 +87,8 @@ def _growth(growth: Figures) -> list[list[str]]:
         row = [name, _list(part["joints"] if of == "joints" else part["rows"])]
         for what in ("kernel", "step"):
             slope = part.get(f"{what}_line", {}).get("us_per_row")
-            row += [_list(part[f"{what}_us"]), f"{part[f'{what}_exponent']:.2f}", short(slope)]
+            exponents = (part[f"{what}_exponent"], part[f"{what}_last_exponent"])
+            row += [_list(part[f"{what}_us"]), *map(short, exponents), short(slope)]
         rows.append(row)
     return rows
 
