@@ -45,7 +45,8 @@ def steady(controller: Controller, cycles: int) -> dict[str, Any]:
     few = states[: max(1, cycles // 10)]
     with frozen():
         _run(controller, few, times)  # what a cycle leaves for the next is there from here on
-        objects, resident = len(gc.get_objects()), _resident()
+        resident = _resident()
+        objects = len(gc.get_objects())
         _run(controller, states, times)
         objects, more = len(gc.get_objects()) - objects, _resident()
         traced = _traced(controller, few)

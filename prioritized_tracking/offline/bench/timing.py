@@ -18,7 +18,7 @@ from typing import Any
 import numpy as np
 
 #: Calls of one thing before the next has its turn: enough for warm caches, short against slow spells.
-TURN = 10
+TURN = 20
 
 
 @dataclass(frozen=True)
