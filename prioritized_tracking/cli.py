@@ -153,7 +153,7 @@ def _add_bench(verbs: argparse._SubParsersAction[argparse.ArgumentParser]) -> No
     )
     _add_stack(parser, nargs="?")
     parser.add_argument(
-        "--out", metavar="DIR", default="results/bench", help="folder for the results; default: results/bench"
+        "--out", metavar="DIR", default="bench", help="folder for the results; default: bench"
     )
     parser.add_argument(
         "--seconds", metavar="S", type=_positive, help="length of each comparison; default: 3 s"
