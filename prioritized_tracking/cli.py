@@ -33,6 +33,11 @@ deviations of its plant block. Writes summary.json, signals_LAW.npz and a copy o
 _COMPANION = """Compute the joint reference that agrees with a pose path of the stack, the whole path at once,
 within the joint limits and through singularities. Writes a joints file: t and one column for each joint."""
 
+_BENCH = """Measure the control law on this machine: one cycle by part, against a textbook version in NumPy,
+the bare terms of the dynamics library and Cartesian impedance; branches, growth with joints and rows,
+rehearsals, batches, memory, starting. Times are compared in turns, so their ratios mean more than the times.
+Takes a minute; writes bench.json and bench.png to DIR."""
+
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """
@@ -86,6 +91,7 @@ def _parser() -> argparse.ArgumentParser:
     verbs = parser.add_subparsers(title="verbs", metavar="VERB", required=True)
     _add_rehearse(verbs)
     _add_companion(verbs)
+    _add_bench(verbs)
     return parser
 
 
@@ -140,8 +146,34 @@ def _add_companion(verbs: argparse._SubParsersAction[argparse.ArgumentParser]) -
     parser.set_defaults(run=_companion)
 
 
-def _add_stack(parser: argparse.ArgumentParser) -> None:
-    parser.add_argument("stack", metavar="STACK.yaml", help="stack file (a ROS 2 parameter file)")
+def _add_bench(verbs: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    parser = verbs.add_parser(
+        "bench",
+        help="how fast the control law is on this machine, and against what",
+        description=_BENCH,
+        epilog=_EPILOG,
+        allow_abbrev=False,
+    )
+    _add_stack(parser, nargs="?")
+    parser.add_argument(
+        "--out", metavar="DIR", default="bench", help="folder for the results; default: bench"
+    )
+    parser.add_argument(
+        "--seconds", metavar="S", type=_positive, help="length of each comparison; default: 3 s"
+    )
+    parser.add_argument(
+        "--quick",
+        action="store_true",
+        help="see that everything runs, in seconds; its figures mean little",
+    )
+    parser.set_defaults(run=_bench)
+
+
+def _add_stack(parser: argparse.ArgumentParser, nargs: str | None = None) -> None:
+    ending = "" if nargs is None else "; default: that of the seven-axis demo"
+    parser.add_argument(
+        "stack", metavar="STACK.yaml", nargs=nargs, help=f"stack file (a ROS 2 parameter file){ending}"
+    )
     parser.add_argument(
         "--set",
         metavar="KEY=VALUE",
@@ -195,6 +227,18 @@ def _companion(options: argparse.Namespace) -> int:
 
     return companion_command.run(
         options.stack, options.out, channel=options.channel, overrides=options.overrides
+    )
+
+
+def _bench(options: argparse.Namespace) -> int:
+    from prioritized_tracking.offline import bench_command
+
+    return bench_command.run(
+        options.stack,
+        options.out,
+        seconds=options.seconds,
+        quick=options.quick,
+        overrides=options.overrides,
     )
 
 

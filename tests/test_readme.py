@@ -73,7 +73,7 @@ def test_every_file_named_exists():
 
 def test_the_example_arm_goes_the_whole_way(tmp_path, monkeypatch, capsys):
     """
-    Path, stack, companion and both rehearsals of "Your own arm", with the demo's arm, shortened.
+    Path, stack, companion, rehearsals of "Your own arm", with the demo's arm; the bench; all shortened.
 
     """
     monkeypatch.chdir(tmp_path)
@@ -86,8 +86,10 @@ def test_the_example_arm_goes_the_whole_way(tmp_path, monkeypatch, capsys):
         verbs.append(arguments[0])
         if arguments[0] == "rehearse":
             arguments += ["--seconds", "0.05"]
+        if arguments[0] == "bench":
+            arguments += ["--quick"]
         assert main(arguments) == 0, capsys.readouterr().err
-    assert verbs == ["companion", "rehearse", "rehearse"]
+    assert verbs == ["companion", "rehearse", "rehearse", "bench"]
     summary = json.loads(Path("results/summary.json").read_text(encoding="utf-8"))
     table = README.split("### Reading the results")[1].split("## How it works")[0]
     table, signals = table.split("Signals by name")

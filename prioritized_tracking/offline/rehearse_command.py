@@ -130,28 +130,35 @@ def settling_time(seconds: float) -> float:
     return min(SETTLE_S, 0.5 * seconds)
 
 
-def folder_problem(folder: Path) -> Problem | None:
+def folder_problem(
+    folder: Path, last: str = SUMMARY, others: Sequence[str] = (STACK, SIGNALS.format("*"))
+) -> Problem | None:
     """
     Return what speaks against a results folder; it is neither made nor changed.
 
-    A folder that holds other files than a rehearsal's is refused, so that a slip of the pen does not scatter
-    files over someone's work. A rehearsal that was refused or killed leaves a part of its files.
+    A folder that holds other files than ours is refused, so that a slip of the pen does not scatter files
+    over someone's work. A run that was refused or killed leaves a part of its files.
+
+    Parameters
+    ----------
+    folder : Path
+    last : str
+        The file that a run of this verb writes at its end.
+    others : sequence of str
+        Patterns of the files it has written before.
 
     """
-    where, remedy = f"--out {folder}", "Name a new folder, an empty one, or that of an earlier rehearsal."
+    where, remedy = f"--out {folder}", "Name a new folder, an empty one, or that of an earlier run."
     try:
         if folder.exists() and not folder.is_dir():
             return Problem(what="the results folder is a file", where=where, remedy=remedy)
-        finished = (folder / SUMMARY).is_file()
-        if folder.is_dir() and not finished and not all(_is_ours(path.name) for path in folder.iterdir()):
+        if not folder.is_dir() or (folder / last).is_file():
+            return None
+        if not all(any(fnmatch(path.name, ours) for ours in others) for path in folder.iterdir()):
             return Problem(what="the results folder holds other files", where=where, remedy=remedy)
     except (OSError, ValueError) as error:
         return _unusable(where, error)
     return None
-
-
-def _is_ours(name: str) -> bool:
-    return name == STACK or fnmatch(name, SIGNALS.format("*"))
 
 
 def _prepare(folder: Path, stack_text: str) -> None:

@@ -17,7 +17,7 @@ from hypothesis import strategies as st
 from prioritized_tracking.core import branches as br
 from prioritized_tracking.core.claims import Claims
 from prioritized_tracking.core.hierarchy import hierarchy, largest_eigenvalue, principal, small_inverse
-from tests.textbook import TextbookTask, blended
+from prioritized_tracking.offline.textbook import TextbookTask, blended
 
 PROMISED = 1e-9
 
@@ -77,7 +77,7 @@ def random_stack(rng, n, sizes, *, spread=3.0):
 @pytest.mark.parametrize("sizes", [(1,), (2, 2), (1, 1, 2, 3, 3), (3, 3, 3), (6, 2)])
 @pytest.mark.parametrize("seed", range(6))
 def test_equals_the_textbook_form_inside_and_outside_bands(sizes, seed):
-    """Source: independent naive version, tests/textbook.py; no more than 16 branches are met."""
+    """Source: independent naive version, offline/textbook.py; no more than 16 branches are met."""
     rng = np.random.default_rng(seed)
     n = 7
     M = random_inertia(rng, n)

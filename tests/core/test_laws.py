@@ -18,9 +18,9 @@ from prioritized_tracking.core import arm as arms
 from prioritized_tracking.core.kernel import TWIN_STEP
 from prioritized_tracking.core.laws import LAWS, ToolGains
 from prioritized_tracking.core.references import JointHold, PoseHold
+from prioritized_tracking.offline.textbook import TextbookTask, blended
 from tests.arms import planar_arm
 from tests.stacks import controller, planar, seven_axes, task
-from tests.textbook import TextbookTask, blended
 
 
 def terms(arm, q, v):
@@ -75,7 +75,7 @@ def test_the_lyapunov_function_falls_as_promised(make):
 @pytest.mark.parametrize("make", [planar, seven_axes], ids=["planar", "seven axes"])
 def test_torque_equals_the_textbook_form(make):
     """
-    τ = M q̈_r + C q̇_r + g − L D Lᵀ s, q̇_r and D from the naive oracle (tests/textbook.py).
+    τ = M q̈_r + C q̇_r + g − L D Lᵀ s, q̇_r and D from the naive oracle (offline/textbook.py).
 
     """
     control = make()
