@@ -68,21 +68,37 @@ class Branches(NamedTuple):
     push: Array
 
 
-def allocate_branches(n: int, r: int, most_rows: int) -> Branches:
+@compiled
+def branches_of(buffer: Array, n: int, r: int) -> Branches:
     """
-    Room for all children that ``MOST_BRANCHES`` branches can have at one task.
+    Views of a buffer with one row for each branch; see `claims.room_of`.
 
     """
-    b = MOST_BRANCHES * (most_rows + 1)
-    return Branches(
-        weight=np.zeros(b),
-        owned=np.zeros((b, r + 1)),
-        apparent=np.zeros((b, r + 1)),
-        N=np.zeros((b, n, n)),
-        u=np.zeros((b, n)),
-        feedback=np.zeros((b, n, n)),
-        push=np.zeros((b, n)),
-    )
+    b, a = buffer.shape[0] // (1 + 2 * (r + 1) + 2 * n + 2 * n * n), 0
+    weight, a = buffer[a : a + b], a + b
+    owned, a = buffer[a : a + b * (r + 1)].reshape(b, r + 1), a + b * (r + 1)
+    apparent, a = buffer[a : a + b * (r + 1)].reshape(b, r + 1), a + b * (r + 1)
+    N, a = buffer[a : a + b * n * n].reshape(b, n, n), a + b * n * n
+    u, a = buffer[a : a + b * n].reshape(b, n), a + b * n
+    feedback, a = buffer[a : a + b * n * n].reshape(b, n, n), a + b * n * n
+    push = buffer[a : a + b * n].reshape(b, n)
+    return Branches(weight, owned, apparent, N, u, feedback, push)
+
+
+def branch_buffer(n: int, r: int, most_rows: int) -> Array:
+    """
+    Room for all children that ``MOST_BRANCHES`` branches can have at one task of at most so many rows.
+
+    """
+    return np.zeros(MOST_BRANCHES * (most_rows + 1) * (1 + 2 * (r + 1) + 2 * n + 2 * n * n))
+
+
+def allocate_branches(n: int, r: int, most_rows: int) -> Branches:
+    """
+    Branches with a buffer of their own.
+
+    """
+    return branches_of(branch_buffer(n, r, most_rows), n, r)
 
 
 @compiled

@@ -102,6 +102,89 @@ class Room(NamedTuple):
     velocity: Array
 
 
+class Sizes(NamedTuple):
+    """
+    What determines the size of a `Room`.
+
+    n, m, r : joints, rows of all chart tasks, chart tasks.
+    columns : of the rows: 6 for each frame, and n.
+    sources : pose references, and one at rest.
+    most_rows : of a task.
+
+    """
+
+    n: int
+    m: int
+    r: int
+    columns: int
+    sources: int
+    most_rows: int
+
+
+@compiled
+def block(buffer: Array, start: int, rows: int, columns: int) -> Array:
+    """
+    View of a buffer from a place on, as a matrix.
+
+    """
+    view: Array = buffer[start : start + rows * columns].reshape(rows, columns)
+    return view
+
+
+@compiled
+def room_of(buffer: Array, sizes: Sizes) -> Room:
+    """
+    Views of a buffer: a call of compiled code pays for each array it is given, and this is one.
+
+    """
+    n, m, columns = sizes.n, sizes.m, sizes.columns
+    by_row = block(buffer, 0, 5, m)
+    a = 5 * m
+    by_joint = block(buffer, a, 6, n)
+    a += 6 * n
+    validity = buffer[a : a + sizes.r]
+    a += sizes.r
+    square = buffer[a : a + 3 * n * n].reshape(3, n, n)
+    a += 3 * n * n
+    wide = max(6, n)
+    rows, a = block(buffer, a, m, columns), a + m * columns
+    rows_d, a = block(buffer, a, m, wide), a + m * wide
+    rate, a = block(buffer, a, m, sizes.most_rows), a + m * sizes.most_rows
+    rate_d, a = block(buffer, a, m, sizes.most_rows), a + m * sizes.most_rows
+    V, a = block(buffer, a, sizes.sources, 6), a + sizes.sources * 6
+    motion, a = block(buffer, a, columns, n), a + columns * n
+    J = block(buffer, a, m, n)
+    claims = Claims(square[0], square[1], J, by_row[0], validity, by_joint[0], by_joint[1])
+    return Room(
+        by_row[1],
+        by_row[2],
+        by_row[3],
+        rows,
+        rows_d,
+        rate,
+        rate_d,
+        V,
+        motion,
+        square[2],
+        by_joint[2],
+        by_joint[3],
+        by_row[4],
+        by_joint[4],
+        claims,
+        by_joint[5],
+    )
+
+
+def buffer_size(sizes: Sizes) -> int:
+    """
+    Numbers in a `Room`.
+
+    """
+    n, m = sizes.n, sizes.m
+    by_row = 5 + sizes.columns + max(6, n) + 2 * sizes.most_rows + n
+    return m * by_row + 6 * n + sizes.r + 3 * n * n + 6 * sizes.sources + sizes.columns * n
+
+
 def allocate_claims(n: int, m: int, r: int) -> Claims:
     """
     Claims of m rows of r tasks.
@@ -115,31 +198,6 @@ def allocate_claims(n: int, m: int, r: int) -> Claims:
         validity=np.zeros(r),
         posture=np.zeros(n),
         posture_feed_forward=np.zeros(n),
-    )
-
-
-def allocate_room(n: int, m: int, r: int, frames: int, sources: int, most_rows: int) -> Room:
-    """
-    Room for m rows of r tasks on some frames, driven by some pose references.
-
-    """
-    return Room(
-        x=np.zeros(m),
-        x_d=np.zeros(m),
-        x_dot_d=np.zeros(m),
-        rows=np.zeros((m, 6 * frames + n)),
-        rows_d=np.zeros((m, max(6, n))),
-        rate=np.zeros((m, most_rows)),
-        rate_d=np.zeros((m, most_rows)),
-        V=np.zeros((sources + 1, 6)),
-        motion=np.vstack([np.zeros((6 * frames, n)), np.eye(n)]),
-        M=np.eye(n),
-        q=np.zeros(n),
-        q_d=np.zeros(n),
-        error=np.zeros(m),
-        posture_error=np.zeros(n),
-        claims=allocate_claims(n, m, r),
-        velocity=np.zeros(n),
     )
 
 

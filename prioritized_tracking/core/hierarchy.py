@@ -229,6 +229,9 @@ def split(
     """
     low, high = gains.band[i, 0], gains.band[i, 1]
     lam, U = principal(gram)
+    if not math.isfinite(lam[0]):
+        branches.u[b] = np.nan  # the end of it: no velocity will come out
+        return count
     residual, UA = residual @ U, U.T @ A
     share = np.zeros(lam.shape[0] + 1)
     share[0] = 1.0
@@ -252,11 +255,21 @@ def principal(gram: Array) -> tuple[Array, Array]:
     """
     Eigenvalues of a small symmetric matrix from high to low, and its eigenvectors as columns.
 
+    Eigenvalues are NaN where the problem has no solution. The attempt is made here, and not further
+    up, because it costs compiled code some microseconds: this is called inside bands only.
+
     """
-    if gram.shape[0] == 1:
+    k = gram.shape[0]
+    if k == 1:
         return gram[0].copy(), np.ones((1, 1))
-    lam, U = np.linalg.eigh(gram)
-    return lam[::-1].copy(), np.ascontiguousarray(U[:, ::-1])
+    lam, U = np.full(k, np.nan), np.eye(k)
+    try:
+        values, vectors = np.linalg.eigh(gram)
+        lam[:] = values[::-1]
+        U[:] = vectors[:, ::-1]
+    except Exception:  # numbers that are not finite; compiled code can tell no classes apart
+        lam[:] = np.nan
+    return lam, U
 
 
 @compiled

@@ -14,8 +14,8 @@ import numpy as np
 
 from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.arm.motion import friction
-from prioritized_tracking.core.branches import Branches, Gains, blend
-from prioritized_tracking.core.claims import Layout, Room, form_claims
+from prioritized_tracking.core.branches import Branches, Gains, blend, branches_of
+from prioritized_tracking.core.claims import Layout, Room, Sizes, form_claims, room_of
 from prioritized_tracking.core.hierarchy import hierarchy
 from prioritized_tracking.core.rotation import Array
 
@@ -71,9 +71,10 @@ def allocate_outcome(n: int, r: int) -> Outcome:
 def prioritized_torque(
     layout: Layout,
     gains: Gains,
-    here: Room,
-    there: Room,
-    branches: Branches,
+    sizes: Sizes,
+    buffer_here: Array,
+    buffer_there: Array,
+    branch_buffer: Array,
     terms: Terms,
     v: Array,
     push_scale: float,
@@ -86,8 +87,9 @@ def prioritized_torque(
     Parameters
     ----------
     layout, gains : the stack.
-    here, there : charts evaluated at the state, and at its twin ``TWIN_STEP`` later.
-    branches : room, see ``allocate_branches``.
+    sizes : of the buffers.
+    buffer_here, buffer_there : charts evaluated at the state, and at its twin ``TWIN_STEP`` later.
+    branch_buffer : see `branches.branch_buffer`.
     terms : of the arm at the state.
     v : (n,) measured joint velocity, rad/s.
     push_scale : 0 … 1, ramp of the steady push.
@@ -99,6 +101,8 @@ def prioritized_torque(
     count, pruned : see ``reference_velocity``; with count 0 the torque is zero and means nothing.
 
     """
+    here, there = room_of(buffer_here, sizes), room_of(buffer_there, sizes)
+    branches = branches_of(branch_buffer, sizes.n, sizes.r)
     count, pruned = 0, False
     for twin in (False, True):
         found, many = reference_velocity(layout, gains, there if twin else here, here, branches, twin)
@@ -153,12 +157,7 @@ def reference_velocity(
     """
     count, pruned = 0, False
     if prepare(layout, room, nominal, twin):
-        try:
-            count, pruned = hierarchy(gains, room.claims, branches, not twin)
-        except (
-            Exception
-        ):  # an eigenvalue problem with numbers that are not finite; numba knows no other class
-            count = 0
+        count, pruned = hierarchy(gains, room.claims, branches, not twin)
     room.velocity[:] = 0.0
     if count > 0:
         velocity = (branches.weight[:count] @ branches.u[:count]) @ room.claims.L_inverse

@@ -16,7 +16,7 @@ from typing import Any, ClassVar
 import numpy as np
 
 from prioritized_tracking.core.arm import Arm
-from prioritized_tracking.core.branches import allocate_branches, blend
+from prioritized_tracking.core.branches import blend, branch_buffer, branches_of
 from prioritized_tracking.core.kernel import (
     TWIN_STEP,
     allocate_outcome,
@@ -150,7 +150,8 @@ class Prioritized(Law):
     def __init__(self, arm: Arm, stack: Stack) -> None:
         super().__init__(arm, stack)
         most_rows = max((task.m for task in stack.tasks), default=1)
-        self._branches = allocate_branches(arm.n, len(stack.tasks), most_rows)
+        self._branch_buffer = branch_buffer(arm.n, len(stack.tasks), most_rows)
+        self._branches = branches_of(self._branch_buffer, arm.n, len(stack.tasks))
         self._gains = stack.gains
         self._floor = stack.feedback_floor
 
@@ -162,9 +163,10 @@ class Prioritized(Law):
         count, self.pruned = prioritized_torque(
             self.layout,
             self._gains,
-            here.room,
-            there.room,
-            self._branches,
+            here.sizes,
+            here.buffer,
+            there.buffer,
+            self._branch_buffer,
             here.terms,
             v,
             push_scale,

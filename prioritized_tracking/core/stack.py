@@ -22,7 +22,7 @@ from prioritized_tracking.charts.joints import JointChart
 from prioritized_tracking.core.arm import Arm, frame_motion
 from prioritized_tracking.core.branches import Gains
 from prioritized_tracking.core.channels import Samples
-from prioritized_tracking.core.claims import Layout, allocate_room
+from prioritized_tracking.core.claims import Layout, Sizes, buffer_size, room_of
 from prioritized_tracking.core.kernel import Terms
 from prioritized_tracking.core.references import JointSample, PoseSample
 from prioritized_tracking.core.rotation import Array, advance_joints, advance_pose
@@ -221,7 +221,7 @@ class Evaluation:
     Attributes
     ----------
     data : what `core.arm` computed for the state.
-    room : everything the charts and the hierarchy work on.
+    buffer, room : everything the charts and the hierarchy work on, as one array and as views of it.
     poses : for each of ``stack.motions`` the pose (R, p) of the frame in its base and its Jacobian.
     targets : the references the charts are evaluated with, by channel.
     terms : inertia, Coriolis, gravity and friction terms, for the law.
@@ -232,8 +232,12 @@ class Evaluation:
         n, frames, names = arm.n, len(stack.motions), stack.pose_references
         most_rows = max((task.m for task in stack.tasks), default=1)
         self.arm, self.stack, self.data = arm, stack, arm.data()
-        room = allocate_room(n, stack.first_row[-1], len(stack.tasks), frames, len(names), most_rows)
-        self.room = room = room._replace(M=self.data.M)
+        m, r = stack.first_row[-1], len(stack.tasks)
+        self.sizes = Sizes(n, m, r, 6 * frames + n, len(names) + 1, most_rows)
+        self.buffer = np.zeros(buffer_size(self.sizes))
+        self.room = room = room_of(self.buffer, self.sizes)
+        room.motion[6 * frames :] = np.eye(n)
+        self.data.M = room.M
         self.terms = Terms(self.data.M, self.data.C, self.data.g, arm.viscous.copy(), arm.coulomb.copy())
         self.poses = [(np.eye(3), np.zeros(3), room.motion[6 * f : 6 * f + 6]) for f in range(frames)]
         self._frames = [(arm.frame_id(frame), arm.frame_id(base)) for frame, base in stack.motions]
