@@ -10,12 +10,13 @@ an argument.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Mapping
 from typing import Any
 
 import numpy as np
 
-from prioritized_tracking.core.arm import Arm, ArmData, dynamics, frame_motion, inertia
+from prioritized_tracking.core.arm import Arm, ArmData, dynamics, frame_pose, inertia
 from prioritized_tracking.core.channels import Channel, References, Samples
 from prioritized_tracking.core.claims import Room
 from prioritized_tracking.core.command import HUGE, Command, limit_torque, usable
@@ -300,10 +301,7 @@ class Controller:
         Pose of a frame in a base at joint positions q: (3, 3) and (3,), m.
 
         """
-        R, p, J = np.eye(3), np.zeros(3), np.zeros((6, self.arm.n))
-        inertia(self.arm, self._data, q)
-        frame_motion(self.arm, self._data, frame, base, R, p, J)
-        return R, p
+        return frame_pose(self.arm, self._data, q, frame, base)
 
     def pose_errors(self, q: Array) -> dict[str, tuple[float, float]]:
         """
@@ -315,7 +313,7 @@ class Controller:
             target = self._samples[reference]
             R, p = self.pose(frame, base, q)
             angle = rotation_log(R @ target.R.T, np.zeros(3))
-            errors[name] = (float(np.linalg.norm(p - target.p)), float(angle))
+            errors[name] = (math.dist(p, target.p), float(angle))
         return errors
 
     def start_configuration(self) -> Array:

@@ -18,6 +18,7 @@ from scipy.spatial.transform import Rotation
 from prioritized_tracking.core.arm import (
     build_arm,
     forward_dynamics,
+    frame_pose,
     inertia,
     inverse_dynamics,
 )
@@ -355,3 +356,15 @@ def test_nothing_is_written_to_the_terminal(capfd):
     with pytest.raises(InputError):
         build_arm(planar_urdf().replace('link="link2"', 'link="none"'))
     assert capfd.readouterr() == ("", "")
+
+
+def test_frame_pose_is_the_pose_of_frame_motion():
+    """Also with a base that moves, and where Pinocchio numbers the joints otherwise."""
+    arm = data_arm("panda")
+    rng = np.random.default_rng(4)
+    for frame, base in ((arm.frames[-1], arm.root), (arm.frames[-2], arm.frames[3])):
+        q = rng.uniform(-1.0, 1.0, arm.n)
+        R, p = motion(arm, q, frame, base)[:2]
+        found = frame_pose(arm, arm.data(), q, arm.frame_id(frame), arm.frame_id(base))
+        np.testing.assert_allclose(found[0], R, atol=1e-14)
+        np.testing.assert_allclose(found[1], p, atol=1e-14)

@@ -13,6 +13,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -82,6 +83,14 @@ class Arm:
 
         """
         return len(self.joints)
+
+    @cached_property
+    def frictionless(self) -> bool:
+        """
+        Whether no joint has any friction.
+
+        """
+        return not (self.viscous.any() or self.coulomb.any())
 
     @property
     def model(self) -> Any:

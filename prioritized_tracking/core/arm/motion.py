@@ -123,6 +123,20 @@ def frame_motion(arm: Arm, data: ArmData, frame_id: int, base_id: int, R: Array,
         J[:, built.order] = jacobian
 
 
+def frame_pose(arm: Arm, data: ArmData, q: Array, frame_id: int, base_id: int) -> tuple[Array, Array]:
+    """
+    Return axes (3, 3) and origin (3,), m, of a frame in a base frame at joint positions q, rad.
+
+    """
+    built, work = arm.built, data.pin
+    pin.forwardKinematics(built.model, work, q if built.order is None else q[built.order])
+    pose = pin.updateFramePlacement(built.model, work, frame_id)
+    if base_id not in built.at_root:
+        base = built.ground.get(base_id)
+        pose = (pin.updateFramePlacement(built.model, work, base_id) if base is None else base).actInv(pose)
+    return pose.rotation, pose.translation
+
+
 def _jacobian(model: Any, work: Any, frame_id: int) -> Array:
     """
     Return the Jacobian (6, n) of a frame's origin in root axes, the model's joint order.
@@ -169,7 +183,7 @@ def forward_dynamics(arm: Arm, data: ArmData, q: Array, v: Array, tau: Array) ->
     (Featherstone 2008).
 
     """
-    drive = tau - friction_torque(arm, v)
+    drive = tau if arm.frictionless else tau - friction_torque(arm, v)
     order = arm.built.order
     if order is None:
         return np.array(pin.aba(arm.built.model, data.pin, q, v, drive))
