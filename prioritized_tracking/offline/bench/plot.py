@@ -46,7 +46,9 @@ def _parts(axes: Any, cases: list[Figures]) -> None:
         width = np.array([case["parts_us"][name] for case in cases])
         axes.barh([case["name"] for case in cases], width, left=left, label=name, color=ink)
         left += width
-    axes.set(xlabel="µs", title="one cycle, by part")
+    spent = cases[0]["parts_us"]
+    most = max(names, key=lambda name: spent[name])
+    axes.set(xlabel="µs", title=f"most of a cycle: {most}, {spent[most]:.0f} of {left[0]:.0f} µs")
     axes.margins(y=0.4)
     axes.legend(ncols=4, fontsize=7, loc="upper center")
 
@@ -57,7 +59,8 @@ def _others(axes: Any, case: Figures) -> None:
     names = sorted(times, key=lambda name: times[name])
     bars = axes.barh([name.replace("_", " ") for name in names], [times[n] for n in names], color=_INK[0])
     axes.bar_label(bars, fmt="%.0f", padding=2, fontsize=7)
-    axes.set(xscale="log", xlabel="µs", title=f"{case['name']}, against others")
+    faster = times["textbook"] / times["step"]
+    axes.set(xscale="log", xlabel="µs", title=f"{faster:.0f} times faster than the textbook form")
     axes.margins(x=0.15)
 
 
@@ -68,7 +71,9 @@ def _growth(axes: Any, curves: Mapping[str, tuple[list[float], Figures]], over: 
         for what, word in (("step", "cycle"), ("kernel", "kernel")):
             label = f"{name}{word}: exponent {part[f'{what}_exponent']:.2f}"
             axes.loglog(at, part[f"{what}_us"], "o-", color=next(ink), label=label)
-    axes.set(xlabel=over, ylabel="µs", title=f"growth over {over}")
+    steepest = max(part["step_exponent"] for _, part in curves.values())
+    title = f"twice the {over}: {2.0**steepest:.1f} times the cycle"
+    axes.set(xlabel=over, ylabel="µs", title=title)
     axes.set_xticks(sizes, [str(size) for size in sizes], minor=False)
     axes.xaxis.minorticks_off()
     axes.yaxis.set_major_formatter("{x:g}")
