@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from prioritized_tracking.charts.position import Position
+from prioritized_tracking.charts.position import described_axes
 from prioritized_tracking.core.arm import Arm
 from prioritized_tracking.core.bands import PlacedChart
 from prioritized_tracking.core.channels import Channel
@@ -143,10 +143,8 @@ def described_components(frames: list[PlacedChart]) -> tuple[bool | str, bool]:
 
     """
     charts = [chart for chart, *place in frames if place == [*frames[0][1:]]]
-    translations = [chart for chart in charts if chart.unit == "m"]
-    axes: bool | str = bool(translations)
-    if translations and all(isinstance(chart, Position) for chart in translations):
-        axes = "".join(a for a in "xyz" if any(a in chart.coordinates for chart in translations))
+    axes: bool | str = described_axes(charts)
+    axes = True if axes == "xyz" else axes or False
     return axes, any(chart.unit == "rad" for chart in charts)
 
 

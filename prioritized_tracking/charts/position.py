@@ -7,10 +7,12 @@ Cartesian position: chosen axes of the frame's origin.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 import numpy as np
 from numpy.typing import NDArray
 
-from prioritized_tracking.charts.base import UnitRateChart
+from prioritized_tracking.charts.base import Chart, UnitRateChart
 from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.schema import Parameter
@@ -60,3 +62,14 @@ class Position(UnitRateChart):
 
         """
         return position(p, self._axes, x, rows)
+
+
+def described_axes(charts: Iterable[Chart]) -> str:
+    """
+    Base axes of a frame's position that charts are about: chosen ones, or all if a surface is among them.
+
+    """
+    translations = [chart for chart in charts if chart.unit == "m"]
+    if all(isinstance(chart, Position) for chart in translations):
+        return "".join(axis for axis in "xyz" if any(axis in chart.coordinates for chart in translations))
+    return "xyz"

@@ -16,6 +16,7 @@ from typing import Any
 
 import numpy as np
 
+from prioritized_tracking.charts.position import described_axes
 from prioritized_tracking.core.arm import Arm, ArmData, dynamics, frame_pose, inertia
 from prioritized_tracking.core.channels import Channel, References, Samples
 from prioritized_tracking.core.claims import Room
@@ -79,6 +80,7 @@ class Controller:
         self.described = {
             frame: frozenset(task.unit for task in stack.tasks if task.frame == frame) for frame in self.tools
         }
+        self._axes = {frame: self._described_axes(frame) for frame in self.tools}
         self.names = tuple(t.name for t in stack.tasks) + ((stack.posture.name,) if stack.posture else ())
         ends = (*stack.first_row, stack.first_row[-1] + arm.n)
         self._blocks = tuple((name, slice(*ends[i : i + 2])) for i, name in enumerate(self.names))
@@ -307,14 +309,25 @@ class Controller:
         """
         Distance (m) and angle (rad) of each controlled frame at q from the last cycle's reference.
 
+        The distance counts in the axes that tasks describe; without any, in all of them.
+
         """
         errors = {}
         for name, (frame, base, reference) in self.tools.items():
             target = self._samples[reference]
             R, p = self.pose(frame, base, q)
             angle = rotation_log(R @ target.R.T, np.zeros(3))
-            errors[name] = (math.dist(p, target.p), float(angle))
+            axes = self._axes[name]
+            errors[name] = (math.dist(p[axes], target.p[axes]), float(angle))
         return errors
+
+    def _described_axes(self, frame: str) -> Any:
+        """
+        What selects the described axes of a frame's position.
+
+        """
+        axes = described_axes(task.chart for task in self.stack.tasks if task.frame == frame)
+        return [i for i, axis in enumerate("xyz") if axis in axes] if 0 < len(axes) < 3 else slice(0, 3)
 
     def start_configuration(self) -> Array:
         """

@@ -20,7 +20,7 @@ from prioritized_tracking.charts import Position, RotationVector
 from prioritized_tracking.core import arm as arms
 from prioritized_tracking.core.command import limit_torque
 from prioritized_tracking.core.cycle import Controller
-from prioritized_tracking.core.references import PoseHold
+from prioritized_tracking.core.references import JointHold, PoseHold
 from prioritized_tracking.core.start import StartLimits
 from prioritized_tracking.errors import InputError
 from tests.arms import planar_arm
@@ -363,3 +363,18 @@ def test_cycles_leave_nothing_for_the_garbage_collector():
         assert gc.collect() < 10
     finally:
         gc.enable()
+
+
+def test_axes_no_task_is_about_do_not_count_at_the_start():
+    """A planar arm whose path was drawn 3 cm off its plane may start; 3 cm along its plane it may not."""
+    for offset, refused in (((0.0, 0.0, 0.03), False), ((0.03, 0.0, 0.0), True)):
+        control = holding()
+        R, p = (np.array(part) for part in control.pose(*control.tools["tip"][:2], BENT))
+        pen = control.stack.tasks[0]
+        control = controller(control.arm, [pen], tool=PoseHold(R, p + offset), joints=JointHold(BENT))
+        if refused:
+            with pytest.raises(InputError, match="away from tip"):
+                control.activate(0.0, BENT, STILL)
+        else:
+            control.activate(0.0, BENT, STILL)
+            assert control.pose_errors(BENT)["tip"][0] < 1e-12
