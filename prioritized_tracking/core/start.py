@@ -21,6 +21,14 @@ from prioritized_tracking.errors import Problem
 AT_REST_SPEED = 0.05
 
 
+#: A tool turned by more than this (rad) has hardly been brought to its start with care.
+_TURNED = 1.5
+_TOOL_REMEDY = {
+    False: "Move the arm to the start of the path first.",
+    True: "Move the arm to the start of the path first; or are the quaternion's columns (x y z w) mixed up?",
+}
+
+
 @dataclass(frozen=True, kw_only=True)
 class StartLimits:
     """
@@ -92,7 +100,7 @@ def tool_problems(
                     + " and ".join(f"{limit:g} {unit}" for unit, _, limit in counted)
                     + " apart",
                     got=" and ".join(f"{error:.4g} {unit}" for unit, error, _ in counted),
-                    remedy="Move the arm to the start of the path first.",
+                    remedy=_TOOL_REMEDY[angle > _TURNED],
                 )
             )
     return problems
@@ -117,7 +125,8 @@ def joint_problems(arm: Arm, q: Array, references: Mapping[str, Array], limits: 
                     what=f"reference '{name}' starts away from joint {arm.joints[worst]}",
                     expected=f"at most {limits.joint:g} rad apart",
                     got=f"{gap[worst]:.4g} rad",
-                    remedy="Move the arm to the start of the path first.",
+                    remedy="Move the arm to the start of the path first. A companion of another path starts "
+                    "elsewhere too: compute it again.",
                 )
             )
     return problems

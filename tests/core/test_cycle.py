@@ -378,3 +378,16 @@ def test_axes_no_task_is_about_do_not_count_at_the_start():
         else:
             control.activate(0.0, BENT, STILL)
             assert control.pose_errors(BENT)["tip"][0] < 1e-12
+
+
+def test_a_tool_that_starts_turned_right_round_hints_at_the_order_of_the_quaternion():
+    """Rows with w first, under a header that says otherwise, look like this; so does a wrong companion."""
+    control = planar()
+    turned = task("turn", RotationVector(), "tip", "base")
+    R, p = (np.array(part) for part in control.pose(*control.tools["tip"][:2], BENT))
+    flip = np.diag([1.0, -1.0, -1.0])
+    control = controller(control.arm, [turned], tool=PoseHold(flip @ R, p), joints=JointHold(BENT + 0.2))
+    with pytest.raises(InputError) as caught:
+        control.activate(0.0, BENT, STILL)
+    assert "x y z w" in str(caught.value)
+    assert "companion" in str(caught.value)
