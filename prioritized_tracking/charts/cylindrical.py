@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 
 from prioritized_tracking.charts.base import Chart
-from prioritized_tracking.charts.surface import POINT, finite_point, radial, unit_vector
+from prioritized_tracking.charts.surface import POINT, direction, finite_point, radial, unit_vector
 from prioritized_tracking.compiled import compiled
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.core.smooth import fade
@@ -89,13 +89,7 @@ class Cylindrical(Chart):
 
     parameters = (
         POINT,
-        Parameter(
-            key="axis",
-            type="double_array",
-            default=(0.0, 0.0, 1.0),
-            length=3,
-            help="Direction of the axis, in base; need not be normalised.",
-        ),
+        direction("axis", "Direction of the axis"),
         NEAR_AXIS,
     )
     unit = "m"
@@ -106,8 +100,8 @@ class Cylindrical(Chart):
         self, *, point: Any = (0.0, 0.0, 0.0), axis: Any = (0.0, 0.0, 1.0), near_axis: Any = (0.02, 0.05)
     ) -> None:
         self._point = finite_point("point", point)
-        direction = unit_vector("axis", axis)
-        self._frame = np.array([*azimuth_axes(direction), direction])
+        along = unit_vector("axis", axis)
+        self._frame = np.array([*azimuth_axes(along), along])
         self._span = near_axis_span(near_axis)
 
     def evaluate(self, R: Array, p: Array, x: Array, rows: Array, rate: Array) -> float:

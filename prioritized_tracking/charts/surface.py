@@ -56,6 +56,15 @@ POINT = Parameter(
 )
 
 
+def direction(key: str, meaning: str) -> Parameter:
+    """
+    A direction of the stack file, along base z if left out.
+
+    """
+    text = f"{meaning}, in base; need not be normalised."
+    return Parameter(key=key, type="double_array", default=(0.0, 0.0, 1.0), length=3, help=text)
+
+
 @compiled
 def plane(p: Array, through: Array, normal: Array, x: Array, rows: Array) -> float:
     """
@@ -118,13 +127,7 @@ class Plane(UnitRateChart):
 
     parameters = (
         POINT,
-        Parameter(
-            key="normal",
-            type="double_array",
-            default=(0.0, 0.0, 1.0),
-            length=3,
-            help="Direction in which the distance counts positive, in base; need not be normalised.",
-        ),
+        direction("normal", "Direction in which the distance counts positive"),
     )
     unit = "m"
     coordinates = ("distance",)
@@ -149,13 +152,7 @@ class Cylinder(UnitRateChart):
 
     parameters = (
         POINT,
-        Parameter(
-            key="axis",
-            type="double_array",
-            default=(0.0, 0.0, 1.0),
-            length=3,
-            help="Direction of its axis, in base; need not be normalised.",
-        ),
+        direction("axis", "Direction of its axis"),
         Parameter(
             key="radius", type="double", unit="m", required=True, low=1e-4, help="Radius of the cylinder."
         ),
