@@ -21,6 +21,8 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any, TypeVar
 
+from prioritized_tracking.user_cache import user_cache
+
 Function = TypeVar("Function", bound=Callable[..., Any])
 
 #: Folders of other versions are removed when they have not been used for this long, s.
@@ -50,10 +52,9 @@ def _cache_folder() -> Path:
         It cannot be made or written to.
 
     """
-    base = os.environ.get("NUMBA_CACHE_DIR") or os.path.join(
-        os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache"),
-        "prioritized_tracking",
-    )
+    base = os.environ.get("NUMBA_CACHE_DIR") or user_cache()
+    if base is None:
+        raise FileNotFoundError("the user has no home")
     folder = Path(base) / f"compiled-{_source_hash()}"
     if not folder.is_dir():
         folder.mkdir(parents=True, exist_ok=True)

@@ -101,7 +101,7 @@ def hierarchies():
         room = branches.allocate_branches(n, r, max(sizes))
         count, pruned = hierarchy.hierarchy(gains, wanted, room, True)
         outcome = kernel.allocate_outcome(n, r)
-        branches.blend(room, count, outcome.report, outcome.D, outcome.push)
+        branches.blend(room, count, 0.0, outcome.report, outcome.D, outcome.push)
         u = room.weight[:count] @ room.u[:count]
         found.append(
             np.concatenate([u, outcome.D.ravel(), outcome.push, outcome.report.ravel(), [count, pruned]])

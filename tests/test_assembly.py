@@ -19,6 +19,7 @@ from prioritized_tracking import assembly
 from prioritized_tracking.core.references import JointPath, PosePath
 from prioritized_tracking.errors import InputError
 from prioritized_tracking.files import write_joints_csv
+from prioritized_tracking.user_cache import user_cache
 
 CONFIG = Path(__file__).parents[1] / "config"
 
@@ -220,3 +221,37 @@ def test_a_reference_that_starts_away_from_the_arm_is_refused():
     control = pt.load(CONFIG / "planar_stack.yaml")
     with pytest.raises(InputError, match="starts away from pen"):
         control.activate(0.0, control.start_configuration() + 0.3, np.zeros(2))
+
+
+@pytest.mark.parametrize(
+    ("law", "kept", "words"),
+    [
+        ("cartesian_impedance", "posture", "needs a task on a tool frame"),
+        ("joint_impedance", "pen", "needs a posture task"),
+    ],
+)
+def test_a_law_without_the_tasks_it_takes_its_gains_from_is_refused(stack, law, kept, words):
+    """The message names the key and the remedy."""
+
+    def change(tree):
+        tree.update(law=law, priority=[kept])
+        tree["tasks"] = {kept: tree["tasks"][kept]}
+        if kept == "pen":
+            tree["references"].pop("stretch")
+        else:
+            tree["references"] = {"stretch": {"kind": "joints", "source": "hold"}}
+
+    text = problems(stack(change))
+    assert words in text
+    assert "law" in text.splitlines()[0]
+
+
+def test_the_cache_is_in_the_users_folder(monkeypatch, tmp_path):
+    """XDG base directory specification: XDG_CACHE_HOME if absolute, else ~/.cache; nowhere without a home."""
+    monkeypatch.setenv("XDG_CACHE_HOME", str(tmp_path))
+    assert user_cache() == tmp_path / "prioritized_tracking"
+    monkeypatch.setenv("XDG_CACHE_HOME", "relative")
+    monkeypatch.setenv("HOME", str(tmp_path / "me"))
+    assert user_cache() == tmp_path / "me" / ".cache" / "prioritized_tracking"
+    monkeypatch.setattr("os.path.expanduser", lambda path: path)
+    assert user_cache() is None

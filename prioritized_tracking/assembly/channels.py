@@ -8,7 +8,6 @@ References of a stack file: files read, companions computed or fetched from the 
 from __future__ import annotations
 
 import hashlib
-import os
 from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -23,6 +22,7 @@ from prioritized_tracking.core.references import JointPath, PosePath
 from prioritized_tracking.errors import InputError, Problem
 from prioritized_tracking.files import read_joints_csv, read_pose_csv, write_joints_csv
 from prioritized_tracking.parameters import StackFile, resolve
+from prioritized_tracking.user_cache import user_cache
 
 if TYPE_CHECKING:
     from prioritized_tracking.offline.companion import Companion
@@ -212,14 +212,14 @@ def _cache_file(arm: Arm, path: PosePath, settings: tuple[Any, ...]) -> Path | N
     Where the companion of these inputs is kept: a name made of a hash of all that it depends on.
 
     """
-    folder = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
-    if not os.path.isabs(folder):
+    folder = user_cache()
+    if folder is None:
         return None
     digest = hashlib.sha256(f"companion 1 {arm.joints} {settings} {path.passes} {path.ramp_time}".encode())
     digest.update(arm.model.saveToString().encode())
     for array in (arm.lower, arm.upper, arm.velocity_limit, path.knots, path.positions, path.quaternions):
         digest.update(np.ascontiguousarray(array).tobytes())
-    return Path(folder) / "prioritized_tracking" / f"companion-{digest.hexdigest()[:32]}.csv"
+    return folder / f"companion-{digest.hexdigest()[:32]}.csv"
 
 
 def _store(path: Path, times: Any, joints: tuple[str, ...], q: Any) -> None:
@@ -246,9 +246,9 @@ def check_joint_path(arm: Arm, path: JointPath, pace: float, where: str) -> list
     q = np.array([sample.q for sample in samples])
     speed = pace * np.abs([sample.v for sample in samples])
     problems = []
-    beyond = np.maximum(arm.lower - q, q - arm.upper).max(axis=0)
-    for j in np.flatnonzero(beyond > 0.0):
-        k = int(np.argmax(np.maximum(arm.lower[j] - q[:, j], q[:, j] - arm.upper[j])))
+    beyond = np.maximum(arm.lower - q, q - arm.upper)
+    for j in np.flatnonzero(beyond.max(axis=0) > 0.0):
+        k = int(np.argmax(beyond[:, j]))
         problems.append(
             Problem(
                 what=f"the path leaves the limits of joint {arm.joints[j]}",

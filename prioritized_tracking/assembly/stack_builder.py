@@ -19,6 +19,7 @@ from prioritized_tracking.charts.joints import JointChart
 from prioritized_tracking.charts.joints import Posture as PostureChart
 from prioritized_tracking.core.arm import Arm
 from prioritized_tracking.core.bands import PlacedChart, Survey, default_band, survey
+from prioritized_tracking.core.laws import LAWS
 from prioritized_tracking.core.rotation import Array
 from prioritized_tracking.core.stack import PostureTask, Stack, Task
 from prioritized_tracking.errors import Problem, nearest
@@ -132,14 +133,12 @@ class StackBuilder:
         The laws for comparison need the tasks they take their gains from.
 
         """
-        law = self.file.tree["law"]
-        kinds = {type(chart) for chart in self.charts.values()}
-        tool = any(chart.kind == "pose" for chart in self.charts.values())
-        if law in ("cartesian_impedance", "inverse_jacobian", "damped_inverse") and not tool:
-            what = f"law '{law}' needs a task on a tool frame"
+        law, charts = LAWS[self.file.tree["law"]], self.charts.values()
+        if law.needs_tool and not any(chart.kind == "pose" for chart in charts):
+            what = f"law '{law.name}' needs a task on a tool frame"
             self.report(("law",), what, remedy="Add one, or take joint_impedance.")
-        if law == "joint_impedance" and PostureChart not in kinds:
-            what = "law 'joint_impedance' needs a posture task"
+        if law.needs_posture and not any(isinstance(chart, PostureChart) for chart in charts):
+            what = f"law '{law.name}' needs a posture task"
             self.report(("law",), what, remedy="End the priority list with one.")
 
     def stack(self) -> Stack | None:

@@ -69,12 +69,21 @@ class Branches(NamedTuple):
 
 
 @compiled
-def branches_of(buffer: Array, n: int, r: int) -> Branches:
+def branch_size(n: int, r: int) -> int:
     """
-    Views of a buffer with one row for each branch; see `claims.room_of`.
+    Numbers in one branch.
 
     """
-    b, a = buffer.shape[0] // (1 + 2 * (r + 1) + 2 * n + 2 * n * n), 0
+    return 1 + 2 * (r + 1) + 2 * n + 2 * n * n
+
+
+@compiled
+def branches_of(buffer: Array, n: int, r: int) -> Branches:
+    """
+    Views of a buffer, one field behind the other; see `claims.room_of`.
+
+    """
+    b, a = buffer.shape[0] // branch_size(n, r), 0
     weight, a = buffer[a : a + b], a + b
     owned, a = buffer[a : a + b * (r + 1)].reshape(b, r + 1), a + b * (r + 1)
     apparent, a = buffer[a : a + b * (r + 1)].reshape(b, r + 1), a + b * (r + 1)
@@ -90,7 +99,7 @@ def branch_buffer(n: int, r: int, most_rows: int) -> Array:
     Room for all children that ``MOST_BRANCHES`` branches can have at one task of at most so many rows.
 
     """
-    return np.zeros(MOST_BRANCHES * (most_rows + 1) * (1 + 2 * (r + 1) + 2 * n + 2 * n * n))
+    return np.zeros(MOST_BRANCHES * (most_rows + 1) * branch_size(n, r))
 
 
 def allocate_branches(n: int, r: int, most_rows: int) -> Branches:
@@ -169,13 +178,16 @@ def prune(branches: Branches, count: int) -> int:
 
 
 @compiled
-def blend(branches: Branches, count: int, report: Array, D: Array, push: Array) -> None:
+def blend(
+    branches: Branches, count: int, feedback_floor: float, report: Array, D: Array, push: Array
+) -> None:
     """
     Weighted sums over branches: shares, feedback and push.
 
     Parameters
     ----------
-    branches, count : as ``hierarchy`` left them.
+    branches, count : as ``hierarchy`` left them; at least one.
+    feedback_floor : added to D, 1/s.
     report : (2, r + 1) filled: share of each task, 0 … m; apparent inertia it feels, the largest
         1/λ over what it owns in the heaviest branch, inf if it owns nothing there.
     D : (n, n) filled: feedback in whitened coordinates, 1/s.
@@ -187,4 +199,6 @@ def blend(branches: Branches, count: int, report: Array, D: Array, push: Array) 
     D[:] = branches.weight[0] * branches.feedback[0]
     for b in range(1, count):
         D += branches.weight[b] * branches.feedback[b]
+    for k in range(D.shape[0]):
+        D[k, k] += feedback_floor
     push[:] = branches.weight[:count] @ branches.push[:count]

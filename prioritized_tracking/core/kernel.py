@@ -111,9 +111,7 @@ def prioritized_torque(
             break
         if not twin:
             count, pruned = found, many
-            blend(branches, count, outcome.report, outcome.D, outcome.push)
-            for k in range(v.shape[0]):
-                outcome.D[k, k] += feedback_floor
+            blend(branches, count, feedback_floor, outcome.report, outcome.D, outcome.push)
     acceleration = (there.velocity - here.velocity) / TWIN_STEP
     outcome.feed_forward[:] = inverse_dynamics(terms, here.velocity, acceleration)
     L = here.claims.L

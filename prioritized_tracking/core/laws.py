@@ -57,6 +57,7 @@ class Law:
     rehearsal_only : never to be run on hardware.
     tracks : uses the twin.
     has_shares : blends hierarchies, so that its tasks have shares.
+    needs_tool, needs_posture : it takes its gains from a task on a tool frame, from a posture task.
     outcome : filled by ``torque``; see `kernel.Outcome`.
     velocity : (n,) q̇_r, rad/s.
     branches, pruned : how many exact hierarchies were blended, and whether there were too many.
@@ -67,6 +68,8 @@ class Law:
     rehearsal_only: ClassVar[bool] = False
     tracks: ClassVar[bool] = True
     has_shares: ClassVar[bool] = False
+    needs_tool: ClassVar[bool] = False
+    needs_posture: ClassVar[bool] = False
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
         self.outcome = allocate_outcome(arm.n, len(stack.tasks))
@@ -182,10 +185,8 @@ class Prioritized(Law):
         """
         room, outcome = here.room, self.outcome
         count, self.pruned = reference_velocity(self.layout, self._gains, room, room, self._branches, False)
-        blend(self._branches, count, outcome.report, outcome.D, outcome.push)
-        if self._floor > 0.0:
-            outcome.D[np.diag_indices_from(outcome.D)] += self._floor
         self._take(here, count)
+        blend(self._branches, count, self._floor, outcome.report, outcome.D, outcome.push)
 
     def _take(self, here: Evaluation, count: int) -> None:
         """
@@ -207,8 +208,7 @@ class ToolGains:
 
     Attributes
     ----------
-    motion : index into ``stack.motions``; None: the stack has no pose task.
-    reference : channel of that frame.
+    reference : channel of that frame, the first of ``stack.motions``; empty: the stack has no pose task.
     rows : rows of the frame's Jacobian in use: translation, rotation or both.
     stiffness, damping, k_p : (6,) gains in these rows.
 
@@ -216,7 +216,6 @@ class ToolGains:
 
     def __init__(self, stack: Stack) -> None:
         pose_tasks = [task for task in stack.tasks if task.chart.kind == "pose"]
-        self.motion = 0 if pose_tasks else None
         self.reference = pose_tasks[0].reference if pose_tasks else ""
         rows: list[int] = []
         stiffness, damping = np.zeros((2, 6))
@@ -235,14 +234,24 @@ class ToolGains:
         Pose error (p − p_d, log(R R_dᵀ)), reference velocity and Jacobian, in the rows in use.
 
         """
-        if self.motion is None:
-            return np.zeros(0), np.zeros(0), np.zeros((0, here.arm.n))
-        R, p, J = here.poses[self.motion]
+        if not self.reference:
+            return np.zeros(0), np.zeros(0), self.jacobian(here)
+        R, p, _ = here.poses[0]
         pose: Any = here.targets[self.reference]
         error = np.zeros(6)
         error[:3] = p - pose.p
         rotation_log(R @ pose.R.T, error[3:])
-        return error[self.rows], pose.V[self.rows], J[self.rows]
+        return error[self.rows], pose.V[self.rows], self.jacobian(here)
+
+    def jacobian(self, here: Evaluation) -> Array:
+        """
+        Jacobian of the frame in the rows in use.
+
+        """
+        if not self.reference:
+            return np.zeros((0, here.arm.n))
+        jacobian: Array = here.poses[0][2][self.rows]
+        return jacobian
 
 
 class JointImpedance(Law):
@@ -255,6 +264,7 @@ class JointImpedance(Law):
 
     name = "joint_impedance"
     tracks = False
+    needs_posture = True
 
     def torque(self, here: Evaluation, there: Evaluation, v: Array, push_scale: float) -> None:
         """
@@ -288,6 +298,7 @@ class CartesianImpedance(JointImpedance):
     """
 
     name = "cartesian_impedance"
+    needs_tool, needs_posture = True, False
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
         super().__init__(arm, stack)
@@ -318,6 +329,7 @@ class InverseJacobian(Law):
 
     name = "inverse_jacobian"
     rehearsal_only = True
+    needs_tool = True
 
     def __init__(self, arm: Arm, stack: Stack) -> None:
         super().__init__(arm, stack)
@@ -349,7 +361,7 @@ class InverseJacobian(Law):
         velocity = self.reference(here)
         acceleration = (self.reference(there, here) - velocity) / TWIN_STEP
         s = v - velocity
-        J = self._tool.error(here)[2]
+        J = self._tool.jacobian(here)
         feedback: Array = -J.T @ (self._tool.damping * (J @ s))
         if here.stack.posture:
             feedback -= here.stack.posture.damping * (here.data.M @ s)

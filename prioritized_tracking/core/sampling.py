@@ -42,6 +42,15 @@ def error_rate(stack: Stack) -> float:
     return max(k_p, default=0.0)
 
 
+def velocity_rates(D: Array) -> tuple[float, float]:
+    """
+    Slowest and fastest decay rate of a velocity error under feedback D (n, n), 1/s.
+
+    """
+    rates = np.linalg.eigvalsh(D)
+    return float(rates[0]), float(rates[-1])
+
+
 def decay_rates(stack: Stack, D: Array) -> tuple[float, float]:
     """
     The two parts of r = λ_max(D) + max k_p, 1/s.
@@ -52,4 +61,4 @@ def decay_rates(stack: Stack, D: Array) -> tuple[float, float]:
     D : (n, n) feedback in whitened coordinates, 1/s.
 
     """
-    return float(np.linalg.eigvalsh(D)[-1]), error_rate(stack)
+    return velocity_rates(D)[1], error_rate(stack)

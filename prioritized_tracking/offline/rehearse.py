@@ -50,7 +50,7 @@ MOST_EVENTS = 1000
 """Events kept of one run; a law that trips in every cycle is not worth a million lines."""
 
 _METER_CYCLES = 100
-_GAIN_CYCLES = 20
+_GAIN_CYCLES = 20  # feedback changes with the pose, which takes far longer; its eigenvalues cost 10 µs
 
 
 class Controller(Protocol):

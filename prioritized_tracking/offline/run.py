@@ -11,9 +11,7 @@ import math
 from dataclasses import dataclass, field
 from typing import Any
 
-import numpy as np
-
-from prioritized_tracking.core.sampling import MARGIN, rate_bound
+from prioritized_tracking.core.sampling import MARGIN, rate_bound, velocity_rates
 from prioritized_tracking.offline.signals import Signals
 
 
@@ -84,9 +82,8 @@ class GainCheck:
             In whitened coordinates, 1/s.
 
         """
-        rates = np.linalg.eigvalsh(D)
-        self.slowest = min(self.slowest, float(rates[0]))
-        self.fastest = max(self.fastest, float(rates[-1]))
+        slowest, fastest = velocity_rates(D)
+        self.slowest, self.fastest = min(self.slowest, slowest), max(self.fastest, fastest)
 
     def figures(self) -> dict[str, float]:
         """

@@ -55,7 +55,7 @@ def solve(M, tasks, posture=None, posture_damping=0.0, claim_speed=None):
     branches = br.allocate_branches(n, len(tasks), max(sizes))
     count, _ = hierarchy(gains, claims, branches, True)
     report, D, push = np.zeros((2, len(tasks) + 1)), np.zeros((n, n)), np.zeros(n)
-    br.blend(branches, count, report, D, push)
+    br.blend(branches, count, 0.0, report, D, push)
     velocity = (branches.weight[:count] @ branches.u[:count]) @ claims.L_inverse
     return velocity, L @ D @ L.T, L @ push, report, count, branches
 

@@ -18,6 +18,7 @@ from prioritized_tracking.core import arm as arms
 from prioritized_tracking.core.kernel import TWIN_STEP
 from prioritized_tracking.core.laws import LAWS, ToolGains
 from prioritized_tracking.core.references import JointHold, PoseHold
+from prioritized_tracking.errors import InputError
 from prioritized_tracking.offline.textbook import TextbookTask, blended
 from tests.arms import planar_arm
 from tests.stacks import controller, planar, seven_axes, task
@@ -309,3 +310,22 @@ def test_laws_for_rehearsals_only_say_so():
         "inverse_jacobian",
         "damped_inverse",
     }
+
+
+def test_a_survey_of_a_state_without_solution_is_refused():
+    """No branch, nothing to blend: the same message as for the torque, and no other exception."""
+    control = planar()
+    here, law = control.survey(1.0, np.array([0.5, 0.7, 0.2]))
+    here.room.M[:] = 0.0
+    with pytest.raises(InputError, match="positive definite"):
+        law.survey(here)
+
+
+def test_laws_say_what_they_need():
+    """The laws that control one tool, and the one that only knows the joints."""
+    assert {n for n, law in LAWS.items() if law.needs_tool} == {
+        "cartesian_impedance",
+        "inverse_jacobian",
+        "damped_inverse",
+    }
+    assert {n for n, law in LAWS.items() if law.needs_posture} == {"joint_impedance"}
